@@ -1,0 +1,295 @@
+"""The measured points of one whistler path: de-disperse with the best curve, time the sub-bands.
+
+Multiplying the spectrum by the phase of the current curve turns a whistler that follows it into a
+pulse; each sub-band's pulse is then early or late by what the curve still lacks. The pulse's width
+beyond the sub-band's own resolution is the trace's thickness, and enters the sigma of each time.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import fft, ndimage
+
+from whistler.cleaning import LN2, CleanAudio
+
+PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise is measured there
+SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
+NOISE_GAP_S = 0.12
+LEAST_SNR = 6.0  # of a timed sub-band: chance peaks in the window exceed it once in thirty bands
+TIMING_FACTOR = 0.551 * 1.2  # bound for a flat sub-band, and what peak-picking costs over it
+
+Curve = Callable[[NDArray[np.float64]], NDArray[np.float64]]
+
+
+@dataclass(frozen=True)
+class Trace:
+    """Arrival times along one path, by frequency.
+
+    Parameters
+    ----------
+    frequency_hz : ndarray, shape (n,)
+        Frequencies, Hz.
+    time_s : ndarray, shape (n,)
+        Arrival times from the recording's first frame, s.
+    time_sd_s : ndarray, shape (n,)
+        One-sigma of the times, s.
+    """
+
+    frequency_hz: NDArray[np.float64]
+    time_s: NDArray[np.float64]
+    time_sd_s: NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Straightened:
+    """Envelope power of de-dispersed sub-bands around the pulse.
+
+    Parameters
+    ----------
+    power : ndarray, shape (bands, n)
+        Envelope power over the mean noise of the sub-band.
+    frequency_hz : ndarray, shape (bands,)
+        Sub-band centres.
+    lag_s : ndarray, shape (n,)
+        Time after the curve.
+    band_width_hz : float
+        Equivalent width of each sub-band.
+    """
+
+    power: NDArray[np.float64]
+    frequency_hz: NDArray[np.float64]
+    lag_s: NDArray[np.float64]
+    band_width_hz: float
+
+
+def straighten(
+    audio: CleanAudio,
+    curve: Curve,
+    *,
+    band_hz: tuple[float, float],
+    spacing_hz: float = SUB_BAND_HZ,
+    reach_s: float = 0.15,
+) -> Straightened | None:
+    r"""Return the sub-band envelopes after the curve's dispersion is taken out.
+
+    Parameters
+    ----------
+    audio : CleanAudio
+        Cleaned block that holds the whistler.
+    curve : callable
+        Arrival time, s from the recording's first frame, at frequencies in Hz.
+    band_hz : tuple of float
+        Band to split.
+    spacing_hz : float
+        Distance between sub-band centres.
+    reach_s : float
+        Lags kept each side of the curve.
+
+    Returns
+    -------
+    Straightened or None
+        None when the curve lies outside the block.
+
+    Notes
+    -----
+    The spectrum is multiplied by :math:`\exp(+2\pi i \int (t(f) - t_0) df)`, so that energy on the
+    curve arrives at lag zero (coherent de-dispersion, Hankins & Rickett 1975).
+    """
+    low_hz, high_hz = band_hz
+    grid_hz = np.linspace(low_hz, high_hz, 400)
+    arrival_s = curve(grid_hz)
+    first = int((arrival_s.min() - PULSE_LEAD_S - audio.start_s) * audio.sample_rate_hz)
+    last = int((arrival_s.max() + PULSE_LEAD_S - audio.start_s) * audio.sample_rate_hz)
+    first, last = max(first, 0), min(last, len(audio.samples))
+    if last - first < round(PULSE_LEAD_S * audio.sample_rate_hz):
+        return None
+    size = int(fft.next_fast_len(last - first + int(audio.sample_rate_hz), real=True))
+    spectrum = fft.rfft(audio.samples[first:last], size)
+    frequency_hz = np.arange(len(spectrum)) * audio.sample_rate_hz / size
+    origin_s = audio.start_s + first / audio.sample_rate_hz
+    # After compensation the pulse sits half a second into the (padded) window.
+    delay_s = np.interp(frequency_hz, grid_hz, arrival_s) - origin_s - 0.5
+    phase = 2 * np.pi * np.cumsum(delay_s) * (frequency_hz[1] - frequency_hz[0])
+    spectrum = spectrum * np.exp(1j * phase)
+    centres_hz = _centres(low_hz, high_hz, spacing_hz)
+    return _envelopes(
+        spectrum, frequency_hz, centres_hz, spacing_hz, reach_s, audio.sample_rate_hz, size
+    )
+
+
+def _centres(low_hz: float, high_hz: float, spacing_hz: float) -> NDArray[np.float64]:
+    count = max(int((high_hz - low_hz) / spacing_hz), 2)
+    return low_hz + (high_hz - low_hz) * (np.arange(count) + 0.5) / count
+
+
+def _envelopes(
+    spectrum: NDArray[np.complex128],
+    frequency_hz: NDArray[np.float64],
+    centres_hz: NDArray[np.float64],
+    spacing_hz: float,
+    reach_s: float,
+    rate_hz: float,
+    size: int,
+) -> Straightened:
+    bin_hz = frequency_hz[1]
+    half = int(spacing_hz / bin_hz)
+    window = np.hanning(2 * half + 1)
+    out_size = int(fft.next_fast_len(8 * len(window)))
+    step_s = size / rate_hz / out_size
+    lag_s = step_s * np.arange(out_size) - 0.5
+    near = np.abs(lag_s) <= reach_s
+    noise_at = (np.abs(lag_s) > NOISE_GAP_S) & (np.abs(lag_s) < PULSE_LEAD_S)
+    power = np.empty((len(centres_hz), int(near.sum())))
+    for k, centre in enumerate(np.rint(centres_hz / bin_hz).astype(int)):
+        piece = np.zeros(out_size, complex)
+        low, high = max(centre - half, 0), min(centre + half + 1, len(spectrum))
+        piece[: high - low] = (
+            spectrum[low:high] * window[low - centre + half : high - centre + half]
+        )
+        envelope = np.abs(fft.ifft(piece)) ** 2
+        noise = np.median(envelope[noise_at]) / LN2
+        power[k] = envelope[near] / max(noise, np.finfo(float).tiny)
+    # Equivalent width of a squared Hann window of half-width `spacing`: 3/4 of the spacing.
+    return Straightened(power, centres_hz, lag_s[near], 0.75 * spacing_hz)
+
+
+@dataclass(frozen=True)
+class TraceReading:
+    """A trace with what was seen while reading it.
+
+    Parameters
+    ----------
+    trace : Trace
+        The points.
+    snr : ndarray, shape (n,)
+        Peak power of each timed sub-band over its noise.
+    thickness_s : float
+        RMS thickness of the trace in time, beyond the sub-bands' own resolution.
+    """
+
+    trace: Trace
+    snr: NDArray[np.float64]
+    thickness_s: float
+
+
+def read_trace(
+    view: Straightened, curve: Curve, *, window_s: float, least_snr: float = LEAST_SNR
+) -> TraceReading | None:
+    """Return the times of the sub-bands that rise above the noise near the curve.
+
+    Parameters
+    ----------
+    view : Straightened
+        De-dispersed envelopes.
+    curve : callable
+        The curve they were de-dispersed with.
+    window_s : float
+        Largest lag accepted.
+    least_snr : float
+        Smallest peak power over noise accepted.
+
+    Returns
+    -------
+    TraceReading or None
+        None when fewer than four sub-bands stand out.
+    """
+    step_s = view.lag_s[1] - view.lag_s[0]
+    thickness_s = _thickness(view, window_s)
+    resolution_s = 0.6 / view.band_width_hz  # rms width of the squared Hann pulse, about
+    kernel_s = np.hypot(thickness_s, 0.3 * resolution_s)
+    smooth = ndimage.gaussian_filter1d(view.power, kernel_s / step_s, axis=1, mode="nearest")
+    inside = np.abs(view.lag_s) <= window_s
+    part = smooth[:, inside]
+    at = np.argmax(part, axis=1)
+    peak = part[np.arange(len(part)), at]
+    edge = (at == 0) | (at == part.shape[1] - 1)
+    lag = view.lag_s[inside][at] + _parabola(part, at) * step_s
+    independent = 1.0 + np.sqrt(4 * np.pi) * kernel_s * view.band_width_hz
+    # Averaging over the thickness lowers the chance peaks: the same margin in sigmas of the mean.
+    needed = 1.0 + (least_snr - 1.0) / np.sqrt(independent)
+    kept = (peak >= needed) & ~edge
+    if kept.sum() < 4:
+        return None
+    sd_s = _timing_sd(peak[kept] - 1.0, thickness_s, view.band_width_hz)
+    frequency_hz = view.frequency_hz[kept]
+    trace = Trace(frequency_hz, curve(frequency_hz) + lag[kept], sd_s)
+    return TraceReading(trace, peak[kept], thickness_s)
+
+
+def _parabola(part: NDArray[np.float64], at: NDArray[np.int64]) -> NDArray[np.float64]:
+    rows = np.arange(len(part))
+    middle = np.clip(at, 1, part.shape[1] - 2)
+    left, centre, right = (part[rows, middle + k] for k in (-1, 0, 1))
+    bend = left - 2 * centre + right
+    return np.where(bend < 0, 0.5 * (left - right) / np.where(bend < 0, bend, 1.0), 0.0)
+
+
+def _thickness(view: Straightened, window_s: float) -> float:
+    """RMS width of the stacked pulse beyond the resolution of the sub-bands."""
+    stack = np.minimum(view.power, 50.0).mean(axis=0)
+    base = np.median(stack[np.abs(view.lag_s) > 0.8 * view.lag_s.max()])
+    excess = stack - base
+    inside = np.abs(view.lag_s) <= window_s
+    top = float(excess[inside].max())
+    if top <= 0.0:
+        return 0.0
+    # Half-power width of the connected peak, as the sigma of a Gaussian.
+    centre = int(np.argmax(np.where(inside, excess, -np.inf)))
+    low = centre
+    while low > 0 and excess[low] > 0.5 * top:
+        low -= 1
+    high = centre
+    while high < len(excess) - 1 and excess[high] > 0.5 * top:
+        high += 1
+    sigma_s = (view.lag_s[high] - view.lag_s[low]) / 2.355
+    own_s = 0.96 / view.band_width_hz / 2.355 * 0.75
+    return float(np.sqrt(max(sigma_s**2 - own_s**2, 0.0)))
+
+
+def _timing_sd(
+    snr: NDArray[np.float64], thickness_s: float, band_width_hz: float
+) -> NDArray[np.float64]:
+    """One-sigma of the pulse times: noise, and the speckle of a thick trace."""
+    noise_s = TIMING_FACTOR / (band_width_hz * np.sqrt(2.0 * np.maximum(snr, 0.5)))
+    speckle = 1.0 + 2.0 * thickness_s * band_width_hz
+    return np.hypot(noise_s * np.sqrt(speckle), thickness_s / np.sqrt(speckle)) + 1e-4
+
+
+def median_snr_db(
+    power: NDArray[np.float32],
+    channel_hz: NDArray[np.float64],
+    frame_s: NDArray[np.float64],
+    trace: Trace,
+    curve: Curve,
+) -> float:
+    """Return the median strength of the ridge, dB over the noise, over the trace's band.
+
+    Parameters
+    ----------
+    power : ndarray, shape (channels, frames)
+        Normalised spectrogram.
+    channel_hz, frame_s : ndarray
+        Its axes.
+    trace : Trace
+        Gives the band.
+    curve : callable
+        Arrival time at frequencies in Hz.
+
+    Returns
+    -------
+    float
+        Ridge power in a 21.3 ms Hann cell over the mean noise there; NaN when nothing is inside.
+    """
+    inside = (channel_hz >= trace.frequency_hz.min()) & (channel_hz <= trace.frequency_hz.max())
+    at = np.rint((curve(channel_hz[inside]) - frame_s[0]) / (frame_s[1] - frame_s[0])).astype(int)
+    valid = (at >= 1) & (at < len(frame_s) - 1)
+    if not valid.any():
+        return float("nan")
+    channels = np.flatnonzero(inside)[valid]
+    ridge = np.maximum.reduce([power[channels, at[valid] + k] for k in (-1, 0, 1)])
+    # Largest of three overlapping cells over pure noise averages about 1.5; take that out.
+    return float(10 * np.log10(max(np.median(ridge) - 0.5, 1e-3)))
