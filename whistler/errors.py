@@ -1,12 +1,48 @@
-"""The one family of errors this package raises, each with its message code and exit code.
-
-Codes are a letter (E error, W warning, N note) and three digits: 1xx the recording file, 2xx the
-signal in it, 3xx time, 4xx resources and output, 5xx saved state, 6xx usage. README lists them.
-"""
+"""The one family of errors this package raises, each with its message code and exit code."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+
+CODES = {
+    "E101": "no such file",
+    "E102": "empty, or not an audio file",
+    "E103": "an audio header, but nothing that can be decoded",
+    "E107": "too short",
+    "E109": "the file changed while it was read",
+    "E112": "sample rate or number of channels outside the supported range",
+    "E113": "not a regular file, or not readable",
+    "N101": "the content is of another format than the name says",
+    "W104": "truncated: the header announces more than there is",
+    "W105": "the length in the header was never filled in",
+    "W106": "the header announces less than there is",
+    "W107": "the length in the header ran over at 4 GiB",
+    "W108": "damaged stretch, skipped",
+    "W201": "samples that are not finite numbers",
+    "W202": "clipping",
+    "W206": "silence: one constant value for 0.1 s or more",
+    "W207": "dead channel",
+    "N301": "start time unknown",
+    "E401": "a result cannot be written",
+    "E402": "the output folder holds results of something else",
+    "E403": "the output folder is in use by another run",
+    "N401": "stopped by the user or the system",
+    "N402": "nothing left to do",
+    "W501": "saved state that cannot be used, measured again",
+    "N501": "settings or input changed, measured again",
+    "E601": "an option or setting outside its range",
+    "E602": "a fault in the station file",
+    "E603": "not a time",
+    "E604": "no such channel",
+    "E605": "wrong use of the command line",
+    "E606": "a fault in a table of picks",
+    "E701": "an internal fault; the message names the record of it",
+}
+"""Every message code: a letter (E error, W warning, N note) and three digits.
+
+The first digit gives the subject: 1 the file, 2 the signal in it, 3 time, 4 output and resources,
+5 saved state, 6 usage, 7 the program itself.
+"""
 
 
 @dataclass(frozen=True)
@@ -42,8 +78,8 @@ class Notice:
 
     def __str__(self) -> str:
         """Return the one physical line shown on standard error."""
-        text = f"{self.reason}; {self.consequence}"
-        return f'{self.severity} {self.code} "{printable(self.path)}": {printable(text)}'
+        path = printable(self.path).replace('"', '\\"')
+        return f'{self.severity} {self.code} "{path}": {printable(self.reason)}; {self.consequence}'
 
 
 def printable(text: str) -> str:
@@ -51,17 +87,22 @@ def printable(text: str) -> str:
 
     Examples
     --------
-    >>> printable("a\nb\x1b[0m")
-    'a\\nb\\x1b[0m'
+    >>> print(printable("a\nb\x1b[0m"))
+    a\nb\x1b[0m
+    >>> print(printable("not UTF-8: \udcff"))
+    not UTF-8: \xff
     """
-    return "".join(
-        character
-        if character.isprintable() and character not in '"\\'
-        else character.encode("unicode_escape").decode("ascii")
-        if character not in '"\\'
-        else "\\" + character
-        for character in text
-    )
+    return "".join(map(_printable_character, text))
+
+
+def _printable_character(character: str) -> str:
+    if character == "\\":
+        return "\\\\"
+    if character.isprintable():
+        return character
+    if "\udc80" <= character <= "\udcff":  # a byte of a file name that is not UTF-8
+        return f"\\x{ord(character) - 0xDC00:02x}"
+    return character.encode("unicode_escape").decode("ascii")
 
 
 class WhistlerError(Exception):
@@ -96,3 +137,9 @@ class OutputError(WhistlerError, OSError):
     """A result that cannot be written."""
 
     exit_code = 74
+
+
+class BusyError(WhistlerError, OSError):
+    """An output folder that another run is using."""
+
+    exit_code = 75
