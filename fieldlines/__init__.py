@@ -1,6 +1,6 @@
 """Pure physics of ducted whistlers on dipole field lines: SI in, SI out, no input or output."""
 
-from fieldlines.climatology import saturated_density
+from fieldlines.climatology import AMBIENT_LN_DENSITY_SD, saturated_density
 from fieldlines.coldplasma import (
     group_index,
     quasi_longitudinal_group_index,
@@ -16,6 +16,15 @@ from fieldlines.dipole import (
     invariant_latitude,
 )
 from fieldlines.errors import DomainError, FieldlinesError
+from fieldlines.ground import (
+    GeomagneticPoint,
+    GroundPoint,
+    conjugate_point,
+    geomagnetic_pole,
+    ground_distance,
+    to_geographic,
+    to_geomagnetic,
+)
 from fieldlines.line import FieldLineModel, LineNodes, line_nodes
 from fieldlines.nose import Nose, nose, zero_frequency_dispersion
 from fieldlines.traveltime import (
@@ -28,19 +37,25 @@ from fieldlines.traveltime import (
 from fieldlines.tube import tube_content
 
 __all__ = [
+    "AMBIENT_LN_DENSITY_SD",
     "CentredDipole",
     "ChapmanLayer",
     "DomainError",
     "FieldLineModel",
     "FieldlinesError",
+    "GeomagneticPoint",
+    "GroundPoint",
     "IonMixture",
     "LineNodes",
     "Nose",
     "TravelTime",
     "arc_length",
+    "conjugate_point",
     "dipole_coefficients",
     "electron_density",
     "footpoint_latitude",
+    "geomagnetic_pole",
+    "ground_distance",
     "group_index",
     "invariant_latitude",
     "line_nodes",
@@ -51,6 +66,8 @@ __all__ = [
     "quasi_longitudinal_travel_time",
     "refractive_index",
     "saturated_density",
+    "to_geographic",
+    "to_geomagnetic",
     "travel_time",
     "travel_time_jacobian",
     "tube_content",

@@ -6,10 +6,20 @@ import numpy as np
 import numpy.typing as npt
 
 from fieldlines.constants import (
+    MAXIMUM_L,
+    MINIMUM_L,
     SATURATED_DENSITY_INTERCEPT,
     SATURATED_DENSITY_SLOPE,
 )
 from fieldlines.errors import FloatArray, require_within
+
+#: One-sigma of ln density about :func:`saturated_density` on an ordinary night: a factor of two.
+#: A judgement, to be replaced where something better is known. It has to hold refilling (32 % at
+#: L = 3, 59 % at L = 5: Sheeley et al. 2001, read second-hand), the annual variation (a factor 1.2
+#: to 2 between December and June in the full Carpenter-Anderson formula) and the disagreement of
+#: published climatologies (610 to 1390 per cm^3 at L = 3). Outside the plasmapause the density is
+#: ten times lower, and this spread does not hold.
+AMBIENT_LN_DENSITY_SD = 0.7
 
 
 def saturated_density(l_value: npt.ArrayLike) -> FloatArray:
@@ -46,8 +56,8 @@ def saturated_density(l_value: npt.ArrayLike) -> FloatArray:
     line_l = require_within(
         "l_value",
         l_value,
-        low=1.2,
-        high=8.0,
+        low=MINIMUM_L,
+        high=MAXIMUM_L,
         next_step="choose an L the climatology covers",
     )
     return np.asarray(

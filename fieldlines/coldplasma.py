@@ -12,6 +12,8 @@ which is n^2 = 1 - sum wps^2/(w (w + Os)) with signed gyrofrequencies Os, and n_
 
 from __future__ import annotations
 
+from functools import partial
+
 import numpy as np
 import numpy.typing as npt
 
@@ -312,35 +314,13 @@ def _checked(
 ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray | None]:
     """Return the arguments as arrays after checking their ranges."""
     advice = "drop this value, or correct it"
-    f = require_within(
-        "frequency_hz",
-        frequency_hz,
-        low=0.0,
-        high=np.inf,
-        open_low=True,
-        unit="Hz",
-        next_step=advice,
-    )
-    fp = require_within(
-        "plasma_frequency_hz",
-        plasma_frequency_hz,
-        low=0.0,
-        high=np.inf,
-        unit="Hz",
-        next_step=advice,
-    )
-    fh = require_within(
-        "gyrofrequency_hz",
-        gyrofrequency_hz,
-        low=0.0,
-        high=np.inf,
-        open_low=True,
-        unit="Hz",
-        next_step=advice,
-    )
+    check = partial(require_within, low=0.0, high=np.inf, unit="Hz", next_step=advice)
+    f = check("frequency_hz", frequency_hz, open_low=True)
+    fp = check("plasma_frequency_hz", plasma_frequency_hz)
+    fh = check("gyrofrequency_hz", gyrofrequency_hz, open_low=True)
     if not np.all(f < fh):
-        worst = np.argmax(np.ravel(f - fh))
         pair = np.broadcast_arrays(f, fh)
+        worst = int(np.argmax(f - fh))
         raise DomainError(
             "frequency_hz",
             float(pair[0].flat[worst]),
@@ -349,5 +329,4 @@ def _checked(
         )
     if oxygen_fraction is None:
         return f, fp, fh, None
-    oxygen = require_within("oxygen_fraction", oxygen_fraction, low=0.0, high=1.0, next_step=advice)
-    return f, fp, fh, oxygen
+    return f, fp, fh, check("oxygen_fraction", oxygen_fraction, high=1.0, unit="")

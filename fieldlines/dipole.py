@@ -17,39 +17,8 @@ from fieldlines.constants import (
     HIGHEST_FOOT_M,
     IGRF14_DEGREE_ONE_NT,
     IGRF_EDITION,
-    MAXIMUM_L,
-    MINIMUM_L,
 )
-from fieldlines.errors import FloatArray, require_within
-
-
-def require_l_value(l_value: float) -> float:
-    """Return L as a float after checking it against the range of the model.
-
-    Parameters
-    ----------
-    l_value : float
-        McIlwain L, dimensionless, 1.2 to 8.
-
-    Returns
-    -------
-    float
-        The same L.
-
-    Raises
-    ------
-    DomainError
-        If L is outside the range.
-    """
-    return float(
-        require_within(
-            "l_value",
-            l_value,
-            low=MINIMUM_L,
-            high=MAXIMUM_L,
-            next_step="choose an L the centred-dipole path model covers",
-        )
-    )
+from fieldlines.errors import FloatArray, require_l_value, require_within
 
 
 def dipole_coefficients(decimal_year: float) -> tuple[float, float, float]:

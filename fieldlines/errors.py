@@ -8,6 +8,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from fieldlines.constants import MAXIMUM_L, MINIMUM_L
+
 FloatArray = npt.NDArray[np.float64]
 
 
@@ -100,10 +102,51 @@ def require_within(
     good = above & below & np.isfinite(array)
     if not good.all():
         offender = float(array[~good].flat[0])
-        lower = f"above {low:g}" if open_low else f"from {low:g}"
-        upper = f"below {high:.8g}" if open_high else f"to {high:g}"
-        allowed = f"{lower} {upper} {unit}".rstrip() if np.isfinite(high) else f"{lower} {unit}"
         raise DomainError(
-            argument, offender, allowed=f"{allowed.rstrip()}, finite", next_step=next_step
+            argument,
+            offender,
+            allowed=_describe(low, high, unit=unit, open_low=open_low, open_high=open_high),
+            next_step=next_step,
         )
     return array
+
+
+def require_l_value(l_value: float) -> float:
+    """Return L as a float after checking it against the range of the model.
+
+    Parameters
+    ----------
+    l_value : float
+        McIlwain L, dimensionless, 1.2 to 8.
+
+    Returns
+    -------
+    float
+        The same L.
+
+    Raises
+    ------
+    DomainError
+        If L is outside the range.
+    """
+    return float(
+        require_within(
+            "l_value",
+            l_value,
+            low=MINIMUM_L,
+            high=MAXIMUM_L,
+            next_step="choose an L the centred-dipole path model covers",
+        )
+    )
+
+
+def _describe(low: float, high: float, *, unit: str, open_low: bool, open_high: bool) -> str:
+    """Name a range in words, for a message."""
+    if not np.isfinite(low) and not np.isfinite(high):
+        return "finite"
+    lower = f"above {low:.8g}" if open_low else f"{low:.8g}"
+    if not np.isfinite(high):
+        upper = "" if open_low else " or more"
+        return f"{lower}{upper} {unit}".rstrip() + ", finite"
+    upper = f"below {high:.8g}" if open_high else f"{high:.8g}"
+    return f"{lower} {'and' if open_high else 'to'} {upper} {unit}".rstrip()

@@ -113,7 +113,7 @@ def travel_time(
     """
     nodes = line_nodes(l_value, model=model)
     frequency = _checked_frequency(frequency_hz, l_value=l_value, model=model)
-    density_m3 = _checked_density(equatorial_density_m3)
+    density_m3 = _checked_density(equatorial_density_m3, most_dimensions=1)
     group, phase = _path_terms(frequency, nodes=nodes, model=model)
     unit_power, layer_part = _plasma_parts(nodes, model)
     weight = nodes.weight_m[:, np.newaxis] / SPEED_OF_LIGHT_M_S
@@ -178,17 +178,10 @@ def travel_time_jacobian(
     """
     nodes = line_nodes(l_value, model=model)
     frequency = _checked_frequency(frequency_hz, l_value=l_value, model=model)
-    density_m3 = _checked_density(equatorial_density_m3)
-    if density_m3.ndim:
-        raise DomainError(
-            "equatorial_density_m3",
-            f"array of shape {density_m3.shape}",
-            allowed="one number",
-            next_step="call once for each density",
-        )
+    density_m3 = float(_checked_density(equatorial_density_m3))
     group, phase = _path_terms(frequency, nodes=nodes, model=model)
     unit_power, layer_part = _plasma_parts(nodes, model)
-    power = float(density_m3) * unit_power
+    power = density_m3 * unit_power
     plasma = power + layer_part
     weight = nodes.weight_m[:, np.newaxis] / SPEED_OF_LIGHT_M_S
 
@@ -274,7 +267,7 @@ def quasi_longitudinal_travel_time(
 def plasma_frequency_squared(
     nodes: LineNodes, *, equatorial_density_m3: float, model: FieldLineModel
 ) -> FloatArray:
-    """Return the squared plasma frequency at the nodes of a line, Hz^2.
+    """Return the squared electron plasma frequency at the nodes of a line, Hz^2.
 
     Parameters
     ----------
@@ -351,7 +344,7 @@ def _checked_frequency(
     frequency_hz: npt.ArrayLike, *, l_value: float, model: FieldLineModel
 ) -> FloatArray:
     """Frequencies as a one-dimensional array inside the model's range."""
-    return np.atleast_1d(
+    frequency = np.atleast_1d(
         require_within(
             "frequency_hz",
             frequency_hz,
@@ -363,11 +356,15 @@ def _checked_frequency(
             next_step="drop this frequency or lower the band limit",
         )
     )
+    _require_dimensions("frequency_hz", frequency, most=1)
+    return frequency
 
 
-def _checked_density(equatorial_density_m3: npt.ArrayLike) -> FloatArray:
-    """Densities as an array of positive finite numbers."""
-    return require_within(
+def _checked_density(
+    equatorial_density_m3: npt.ArrayLike, *, most_dimensions: int = 0
+) -> FloatArray:
+    """Densities as an array of at most one dimension, positive and finite."""
+    density_m3 = require_within(
         "equatorial_density_m3",
         equatorial_density_m3,
         low=0.0,
@@ -376,3 +373,16 @@ def _checked_density(equatorial_density_m3: npt.ArrayLike) -> FloatArray:
         unit="m^-3",
         next_step="give a positive density (1 cm^-3 is 1e6 m^-3)",
     )
+    _require_dimensions("equatorial_density_m3", density_m3, most=most_dimensions)
+    return density_m3
+
+
+def _require_dimensions(argument: str, array: FloatArray, *, most: int) -> None:
+    """Refuse an array of more dimensions than the function can return."""
+    if array.ndim > most:
+        raise DomainError(
+            argument,
+            f"array of shape {array.shape}",
+            allowed=f"{most} dimension at most" if most else "one number",
+            next_step="call once for each value, or flatten the array",
+        )
