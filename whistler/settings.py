@@ -29,6 +29,8 @@ class Settings:
         alpha of the density along the line, ``n ~ r**-alpha``, 0 to 6.
     density_exponent_sd : float
         One-sigma of alpha, counted in the profile sigma.
+    fo_f2_sd_mhz, hm_f2_sd_km : float
+        One-sigma of the F2 layer's critical frequency and peak height.
     stroke_distance_sd_m : float
         One-sigma distance of the stroke from the foot of the path, m.
     density_prior : str
@@ -59,9 +61,11 @@ class Settings:
     max_hops: int = 5
     density_exponent: float = 1.0
     density_exponent_sd: float = 0.65
+    fo_f2_sd_mhz: float = 1.5
+    hm_f2_sd_km: float = 40.0
     stroke_distance_sd_m: float = 800e3
     density_prior: str = "saturated"
-    density_prior_sd_dex: float = 0.5
+    density_prior_sd_dex: float = 0.25
     l_range: tuple[float, float] = (1.6, 5.5)
     seed: int = 1
 
@@ -95,6 +99,8 @@ _RANGES: dict[str, tuple[float, float]] = {
     "max_hops": (1, 8),
     "density_exponent": (0.0, 6.0),
     "density_exponent_sd": (0.0, 3.0),
+    "fo_f2_sd_mhz": (0.0, 10.0),
+    "hm_f2_sd_km": (0.0, 200.0),
     "stroke_distance_sd_m": (0.0, 5e6),
     "density_prior_sd_dex": (0.05, 5.0),
     "seed": (0, 2**32 - 1),

@@ -20,6 +20,7 @@ PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise
 SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
 NOISE_GAP_S = 0.12
 LEAST_SNR = 6.0  # of a timed sub-band: chance peaks in the window exceed it once in thirty bands
+HANN_PULSE_WIDTH = 0.72  # half-power width of a Hann passband's pulse, in units of one over spacing
 TIMING_FACTOR = 0.551 * 1.2  # bound for a flat sub-band, and what peak-picking costs over it
 
 Curve = Callable[[NDArray[np.float64]], NDArray[np.float64]]
@@ -230,23 +231,21 @@ def _parabola(part: NDArray[np.float64], at: NDArray[np.int64]) -> NDArray[np.fl
 
 def _thickness(view: Straightened, window_s: float) -> float:
     """RMS width of the stacked pulse beyond the resolution of the sub-bands."""
-    stack = np.minimum(view.power, 50.0).mean(axis=0)
-    base = np.median(stack[np.abs(view.lag_s) > 0.8 * view.lag_s.max()])
-    excess = stack - base
     inside = np.abs(view.lag_s) <= window_s
-    top = float(excess[inside].max())
-    if top <= 0.0:
+    top = view.power[:, inside].max(axis=1)
+    strong = top >= LEAST_SNR
+    if not strong.any():
         return 0.0
-    # Half-power width of the connected peak, as the sigma of a Gaussian.
-    centre = int(np.argmax(np.where(inside, excess, -np.inf)))
-    low = centre
-    while low > 0 and excess[low] > 0.5 * top:
-        low -= 1
-    high = centre
-    while high < len(excess) - 1 and excess[high] > 0.5 * top:
-        high += 1
-    sigma_s = (view.lag_s[high] - view.lag_s[low]) / 2.355
-    own_s = 0.96 / view.band_width_hz / 2.355 * 0.75
+    stack = (view.power[strong] / top[strong, None]).mean(axis=0)
+    base = float(np.median(stack[~inside])) if (~inside).any() else 0.0
+    excess = np.where(inside, stack - base, -np.inf)
+    centre = int(np.argmax(excess))
+    half = 0.5 * excess[centre]
+    low = centre - int(np.argmax(excess[centre::-1] < half))
+    high = centre + int(np.argmax(excess[centre:] < half))
+    # Half-power width of the peak, as the sigma of a Gaussian, less that of the Hann passband.
+    sigma_s = (high - low - 1) * (view.lag_s[1] - view.lag_s[0]) / 2.355
+    own_s = HANN_PULSE_WIDTH * 0.75 / view.band_width_hz / 2.355
     return float(np.sqrt(max(sigma_s**2 - own_s**2, 0.0)))
 
 

@@ -1,0 +1,121 @@
+"""Power summed along curves: the two compiled loops the search spends its time in.
+
+Level one sums the channels of a sub-band along straight lines of every slope that occurs; level two
+adds one such row per sub-band for each template. The rows live on every second frame; their channels
+are taken at single-frame precision.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit, prange
+from numpy.typing import NDArray
+
+CHUNK = 1024  # frames a thread works on at a time: the sums stay in the first-level cache
+
+
+@njit(cache=True, parallel=True, fastmath=True)
+def slope_sums(
+    even_odd: NDArray[np.float32],
+    first_channel: NDArray[np.int64],
+    channel_count: NDArray[np.int64],
+    shift: NDArray[np.int64],
+    rows: NDArray[np.float32],
+    start: int,
+    stop: int,
+) -> None:
+    """Fill `rows[:, start:stop]` with the channel sums along each row's slope.
+
+    Parameters
+    ----------
+    even_odd : ndarray, shape (2, channels, frames), float32
+        Excess power at even and odd frames.
+    first_channel, channel_count : ndarray, shape (r,)
+        Channels of each row.
+    shift : ndarray, shape (r, most channels)
+        Frame shift of each channel of each row, in single frames.
+    rows : ndarray, shape (r, frames), float32
+        Result, written in place.
+    start, stop : int
+        Range of frame pairs to fill.
+    """
+    frames = even_odd.shape[2]
+    for r in prange(rows.shape[0]):
+        row = rows[r]
+        row[start:stop] = 0.0
+        for c in range(channel_count[r]):
+            s = shift[r, c]
+            source = even_odd[s & 1, first_channel[r] + c]
+            whole = s >> 1
+            low = max(start, -whole)
+            high = min(stop, frames - whole)
+            for t in range(low, high):
+                row[t] += source[t + whole]
+
+
+@njit(cache=True, parallel=True, fastmath=True)
+def template_maxima(
+    rows: NDArray[np.float32],
+    row_index: NDArray[np.int64],
+    offset: NDArray[np.int64],
+    band_count: NDArray[np.int64],
+    scale: NDArray[np.float32],
+    starts: NDArray[np.int64],
+    ends: NDArray[np.int64],
+    best: NDArray[np.float32],
+    which: NDArray[np.int32],
+    start: int,
+    stop: int,
+) -> None:
+    """Fill the largest normalised template sum, and its template, at each frame pair.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (r, frames), float32
+        Output of :func:`slope_sums`.
+    row_index, offset : ndarray, shape (t, b)
+        Row and frame-pair offset of each sub-band of each template.
+    band_count : ndarray, shape (t,)
+        Sub-bands that a template reaches.
+    scale : ndarray, shape (t, s, b + 1), float32
+        One over the noise sigma of the sum from start `s` to end `b`; 0 where not searched.
+    starts : ndarray, shape (s,)
+        First sub-band of each searched range.
+    ends : ndarray, shape (b + 1,)
+        1 where a range may end before this sub-band.
+    best, which : ndarray, shape (frames,)
+        Result, written in place: sigma, and template * s + start.
+    start, stop : int
+        Range of frame pairs to fill.
+    """
+    frames = rows.shape[1]
+    start_count = len(starts)
+    for chunk in prange((stop - start + CHUNK - 1) // CHUNK):
+        first = start + chunk * CHUNK
+        last = min(first + CHUNK, stop)
+        total = np.zeros(CHUNK, np.float32)
+        before = np.zeros((start_count, CHUNK), np.float32)
+        best[first:last] = -1e9
+        for k in range(row_index.shape[0]):
+            total[:] = 0.0
+            for b in range(band_count[k]):
+                for s in range(start_count):
+                    if starts[s] == b:
+                        before[s, :] = total
+                source = rows[row_index[k, b]]
+                shift = offset[k, b]
+                low = max(first, -shift)
+                high = min(last, frames - shift)
+                for t in range(low, high):
+                    total[t - first] += source[t + shift]
+                if ends[b + 1] == 0 and b + 1 < band_count[k]:
+                    continue
+                for s in range(start_count):
+                    factor = scale[k, s, b + 1]
+                    if factor > 0.0:
+                        code = k * start_count + s
+                        for t in range(first, last):
+                            z = (total[t - first] - before[s, t - first]) * factor
+                            if z > best[t]:
+                                best[t] = z
+                                which[t] = code

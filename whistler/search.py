@@ -1,0 +1,372 @@
+"""Find falling traces: power along the bank's curves, a threshold from reversed time, peeling."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from whistler.bank import REFERENCE_HZ, Bank
+from whistler.curvesum import slope_sums, template_maxima
+from whistler.spectrogram import Spectrogram
+
+CLIP = 5.0  # times the mean noise power; costs 0.03 dB in noise and takes the rest of the sferics
+BAND_RATIO = 1.2  # width of a sub-band: a curve stays straight in it to a fraction of its own cell
+RANGE_STARTS_HZ = (0.0, 1200.0)
+RANGE_ENDS_HZ = (3600.0, 6200.0)
+MARGIN_S = 4.0  # around a peeled ridge, where the sums are made again
+NULL_WINDOW_S = 0.25
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """A falling trace found in the spectrogram.
+
+    Parameters
+    ----------
+    time_s : float
+        When the curve passes the reference frequency, from the recording's first frame.
+    l_value, density_m3 : float
+        Curve: field line and one-hop-equivalent density.
+    band_hz : tuple of float
+        Band over which the power was summed.
+    strength : float
+        Sum in sigmas of the noise.
+    false_alarms_per_hour : float
+        Expected number of such or stronger sums in an hour of this recording without whistlers.
+    frequency_hz, curve_s : ndarray, shape (n,)
+        The curve itself, times from the recording's first frame.
+    thickness_s : float
+        Time scale of the pass that found it.
+    """
+
+    time_s: float
+    l_value: float
+    density_m3: float
+    band_hz: tuple[float, float]
+    strength: float
+    false_alarms_per_hour: float
+    frequency_hz: NDArray[np.float64]
+    curve_s: NDArray[np.float64]
+    thickness_s: float
+
+
+@dataclass(frozen=True)
+class Null:
+    """Gumbel law of the strongest chance sum in a short window, from the reversed recording.
+
+    Parameters
+    ----------
+    location, scale : float
+        Gumbel parameters, in sigmas.
+    window_s : float
+        Length of the window.
+    """
+
+    location: float
+    scale: float
+    window_s: float
+
+    def rate_per_hour(self, strength: float) -> float:
+        """Expected chance sums of at least this strength in an hour."""
+        exponent = -(strength - self.location) / self.scale
+        share = -np.expm1(-np.exp(min(exponent, 50.0)))
+        return float(3600.0 / self.window_s * share)
+
+    def threshold(self, rate_per_hour: float) -> float:
+        """Strength exceeded by chance `rate_per_hour` times an hour."""
+        share = min(rate_per_hour * self.window_s / 3600.0, 0.5)
+        return float(self.location - self.scale * np.log(-np.log1p(-share)))
+
+
+class CurveSearch:
+    """The bank laid over one spectrogram, ready to be searched and peeled.
+
+    Parameters
+    ----------
+    spectrogram : Spectrogram
+        Normalised power.
+    bank : whistler.bank.Bank
+        Curves at the spectrogram's channels.
+    smooth : int
+        Frames averaged before the sums: 1 for thin traces, more for diffuse ones.
+    """
+
+    def __init__(self, spectrogram: Spectrogram, bank: Bank, *, smooth: int = 1) -> None:
+        self.spectrogram = spectrogram
+        self.bank = bank
+        self._step = max(1, smooth // 2)
+        self._excess = self._prepare(np.minimum(spectrogram.power, np.float32(CLIP)), smooth)
+        self._pair_s = 2 * self._step * spectrogram.hop_s
+        self._plan = _plan_rows(bank, spectrogram.frequency_hz, self._pair_s / 2)
+        frames = self._excess.shape[2]
+        self._rows = np.zeros((len(self._plan.first_channel), frames), np.float32)
+        self._best = np.full(frames, -1e9, np.float32)
+        self._which = np.zeros(frames, np.int32)
+        self._sum(0, frames)
+        self._scale = _range_scale(self._rows, self._plan, self._starts, self._ends)
+        self._maximise(0, frames)
+
+    def _prepare(self, power: NDArray[np.float32], smooth: int) -> NDArray[np.float32]:
+        """Excess over the channel mean, averaged and thinned, split into even and odd frames."""
+        if smooth > 1:
+            total = np.cumsum(power, axis=1, dtype=np.float64)
+            total = np.pad(total, ((0, 0), (1, 0)))
+            power = ((total[:, smooth:] - total[:, :-smooth]) / smooth)[:, :: self._step]
+            power = power.astype(np.float32)
+        power = power - power.mean(axis=1, keepdims=True)
+        even = power.shape[1] // 2 * 2
+        return np.ascontiguousarray(np.stack([power[:, 0:even:2], power[:, 1:even:2]]))
+
+    @property
+    def _origin_s(self) -> float:
+        lead = 0.5 * (2 * self._step - 1) if self._step > 1 else 0.0
+        return self.spectrogram.start_s + lead * self.spectrogram.hop_s
+
+    @property
+    def _starts(self) -> NDArray[np.int64]:
+        edges = self._plan.edges_hz
+        return np.unique([int(np.searchsorted(edges, hz)) for hz in RANGE_STARTS_HZ])
+
+    @property
+    def _ends(self) -> NDArray[np.int64]:
+        edges = self._plan.edges_hz
+        ends = np.zeros(len(edges), np.int64)
+        for hz in RANGE_ENDS_HZ:
+            ends[min(int(np.searchsorted(edges, hz)), len(edges) - 1)] = 1
+        return ends
+
+    def _sum(self, start: int, stop: int, excess: NDArray[np.float32] | None = None) -> None:
+        plan = self._plan
+        source = self._excess if excess is None else excess
+        slope_sums(
+            source, plan.first_channel, plan.channel_count, plan.shift, self._rows, start, stop
+        )
+
+    def _maximise(self, start: int, stop: int) -> None:
+        plan = self._plan
+        template_maxima(
+            self._rows,
+            plan.row_index,
+            plan.offset,
+            plan.band_count,
+            self._scale,
+            self._starts,
+            self._ends,
+            self._best,
+            self._which,
+            start,
+            stop,
+        )
+
+    def null(self, *, bulk: bool = False) -> Null:
+        """Return the law of chance sums: the same bank over reversed time.
+
+        Parameters
+        ----------
+        bulk : bool
+            Judge by the weaker half of the windows only: for a first look at a recording whose
+            whistlers, not yet peeled off, cross the reversed curves.
+        """
+        frames = len(self._best)
+        forward = self._best.copy(), self._which.copy(), self._rows.copy()
+        mirrored = np.ascontiguousarray(self._excess[::-1, :, ::-1])
+        self._sum(0, frames, mirrored)
+        self._maximise(0, frames)
+        reverse = self._best
+        self._best, self._which, self._rows = forward
+        return _gumbel(reverse, self._pair_s, (0.15, 0.5) if bulk else (0.5, 0.95))
+
+    def strongest(self) -> tuple[float, int]:
+        """Return the largest sum and its frame pair."""
+        at = int(np.argmax(self._best))
+        return float(self._best[at]), at
+
+    def peaks(self, threshold: float, *, apart_s: float) -> list[int]:
+        """Return frame pairs of the sums above `threshold`, strongest first, `apart_s` apart."""
+        order = np.flatnonzero(self._best >= threshold)
+        order = order[np.argsort(-self._best[order], kind="stable")]
+        apart = max(1, round(apart_s / self._pair_s))
+        kept: list[int] = []
+        for at in order:
+            if all(abs(int(at) - other) >= apart for other in kept):
+                kept.append(int(at))
+        return kept
+
+    def candidate(self, at: int, null: Null) -> Candidate:
+        """Return the trace whose sum peaks at frame pair `at`."""
+        code = int(self._which[at])
+        template, start = divmod(code, len(self._starts))
+        strength = float(self._best[at])
+        first = int(self._starts[start])
+        last = self._best_end(template, first, at)
+        edges = self._plan.edges_hz
+        return self._describe(
+            template, at * self._pair_s + self._origin_s, (edges[first], edges[last]), strength, null
+        )
+
+    def _best_end(self, template: int, first: int, at: int) -> int:
+        plan = self._plan
+        count = int(plan.band_count[template])
+        at_rows = at + plan.offset[template, :count]
+        inside = (at_rows >= 0) & (at_rows < self._rows.shape[1])
+        value = np.where(
+            inside,
+            self._rows[plan.row_index[template, :count], np.clip(at_rows, 0, len(self._best) - 1)],
+            0.0,
+        )
+        ends = [b for b in range(first + 1, count + 1) if self._ends[b] or b == count]
+        start = int(np.flatnonzero(self._starts == first)[0])
+        scores = [value[first:b].sum() * self._scale[template, start, b] for b in ends]
+        return ends[int(np.argmax(scores))]
+
+    def _describe(
+        self,
+        template: int,
+        time_s: float,
+        band_hz: tuple[float, float],
+        strength: float,
+        null: Null,
+    ) -> Candidate:
+        bank = self.bank
+        inside = np.isfinite(bank.delay_s[template])
+        return Candidate(
+            time_s=time_s,
+            l_value=float(bank.l_value[template]),
+            density_m3=float(bank.density_m3[template]),
+            band_hz=(float(band_hz[0]), float(min(band_hz[1], bank.top_hz[template]))),
+            strength=strength,
+            false_alarms_per_hour=null.rate_per_hour(strength),
+            frequency_hz=bank.frequency_hz[inside],
+            curve_s=time_s + bank.delay_s[template, inside],
+            thickness_s=self._pair_s,
+        )
+
+    def peel(
+        self,
+        frequency_hz: NDArray[np.float64],
+        curve_s: NDArray[np.float64],
+        *,
+        half_width_s: NDArray[np.float64],
+    ) -> None:
+        """Set the cells of a found ridge to the noise mean and make the sums near it again."""
+        channel = np.searchsorted(self.spectrogram.frequency_hz, frequency_hz)
+        channel = np.minimum(channel, self._excess.shape[1] - 1)
+        frame_s = self._pair_s / 2
+        low = np.floor((curve_s - half_width_s - self._origin_s) / frame_s).astype(int)
+        high = np.ceil((curve_s + half_width_s - self._origin_s) / frame_s).astype(int)
+        last = 2 * self._excess.shape[2] - 1
+        for c, a, b in zip(channel, np.clip(low, 0, last), np.clip(high, 0, last), strict=True):
+            for phase in (0, 1):
+                self._excess[phase, c, (a + 1 - phase) // 2 : (b - phase) // 2 + 1] = 0.0
+        reach = round(MARGIN_S / self._pair_s)
+        start = max(0, int(low.min()) // 2 - reach)
+        stop = min(len(self._best), int(high.max()) // 2 + reach)
+        self._sum(start, stop)
+        self._maximise(start, stop)
+
+
+@dataclass(frozen=True)
+class _RowPlan:
+    """How templates share sub-band rows."""
+
+    edges_hz: NDArray[np.float64]
+    first_channel: NDArray[np.int64]
+    channel_count: NDArray[np.int64]
+    shift: NDArray[np.int64]
+    row_index: NDArray[np.int64]
+    offset: NDArray[np.int64]
+    band_count: NDArray[np.int64]
+
+
+def _plan_rows(bank: Bank, frequency_hz: NDArray[np.float64], frame_s: float) -> _RowPlan:
+    """Quantise every template to straight pieces and share the pieces."""
+    edges = _sub_band_edges(frequency_hz)
+    edges_hz = np.append(frequency_hz[edges[:-1]], frequency_hz[-1])
+    bands = len(edges) - 1
+    row_index = np.zeros((len(bank), bands), np.int64)
+    offset = np.zeros((len(bank), bands), np.int64)
+    band_count = np.zeros(len(bank), np.int64)
+    first, count, shifts = [], [], []
+    widest = int(np.diff(edges).max())
+    for b in range(bands):
+        a, z = edges[b], edges[b + 1]
+        spread = (bank.delay_s[:, z - 1] - bank.delay_s[:, a]) / (2.0 * frame_s)
+        reached = np.isfinite(spread)
+        band_count[reached] = b + 1
+        kind, inverse = np.unique(np.rint(spread[reached]).astype(int), return_inverse=True)
+        row_index[reached, b] = inverse + len(first)
+        middle = bank.delay_s[reached, a:z].mean(axis=1)
+        offset[reached, b] = np.rint(middle / (2.0 * frame_s)).astype(int)
+        place = np.linspace(-0.5, 0.5, z - a) if z - a > 1 else np.zeros(1)
+        for value in kind:
+            shift = np.zeros(widest, np.int64)
+            shift[: z - a] = np.rint(2.0 * value * place).astype(int)
+            first.append(a)
+            count.append(z - a)
+            shifts.append(shift)
+    return _RowPlan(
+        edges_hz,
+        np.array(first),
+        np.array(count),
+        np.array(shifts),
+        row_index,
+        offset,
+        band_count,
+    )
+
+
+def _sub_band_edges(frequency_hz: NDArray[np.float64]) -> NDArray[np.int64]:
+    edges = [0]
+    while edges[-1] < len(frequency_hz):
+        top_hz = frequency_hz[edges[-1]] * BAND_RATIO
+        following = int(np.searchsorted(frequency_hz, top_hz))
+        edges.append(min(max(following, edges[-1] + 2), len(frequency_hz)))
+    return np.array(edges)
+
+
+def _range_scale(
+    rows: NDArray[np.float32],
+    plan: _RowPlan,
+    starts: NDArray[np.int64],
+    ends: NDArray[np.int64],
+) -> NDArray[np.float32]:
+    """One over the noise sigma of each searched range of each template."""
+    sample = rows[:, :: max(1, rows.shape[1] // 1500)]
+    low, high = np.percentile(sample, [15.87, 84.13], axis=1)
+    variance = np.maximum(0.5 * (high - low), 1e-3) ** 2
+    templates, bands = plan.row_index.shape
+    scale = np.zeros((templates, len(starts), bands + 1), np.float32)
+    by_band = np.where(
+        np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0
+    )
+    total = np.pad(np.cumsum(by_band, axis=1), ((0, 0), (1, 0)))
+    for s, first in enumerate(starts):
+        for b in range(first + 3, bands + 1):
+            searched = (plan.band_count == b) | ((ends[b] == 1) & (plan.band_count >= b))
+            spread = total[:, b] - total[:, first]
+            scale[searched, s, b] = 1.0 / np.sqrt(spread[searched])
+    return scale
+
+
+def _gumbel(
+    best: NDArray[np.float32], pair_s: float, quantiles: tuple[float, float]
+) -> Null:
+    """Gumbel law through two quantiles of the window maxima; outliers do not move it."""
+    size = max(1, round(NULL_WINDOW_S / pair_s))
+    count = max(len(best) // size, 1)
+    maxima = best[: count * size].reshape(count, -1).max(axis=1)
+    lower, upper = np.quantile(maxima, quantiles)
+    # Gumbel quantile: location - scale ln(-ln q).
+    place = -np.log(-np.log(quantiles))
+    scale = max(float((upper - lower) / (place[1] - place[0])), 0.1)
+    location = float(lower - scale * place[0])
+    return Null(float(location), scale, size * pair_s)
+
+
+def reference_delay_s(
+    frequency_hz: NDArray[np.float64], curve_s: NDArray[np.float64]
+) -> float:
+    """Time at which a curve passes the reference frequency."""
+    return float(np.interp(REFERENCE_HZ, frequency_hz, curve_s))
