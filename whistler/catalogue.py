@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import csv
+import hashlib
 import io
 import json
 import platform
 from collections.abc import Sequence
 from dataclasses import dataclass
+from datetime import datetime
 from importlib import metadata
 from pathlib import Path
 from typing import Any, Protocol
@@ -31,6 +33,7 @@ __all__ = [
     "entry",
     "json_text",
     "measurement_document",
+    "picks_entry",
     "prepare_output",
     "run_record",
     "sidecar",
@@ -102,6 +105,20 @@ def entry(measurement: Measured) -> Entry:
             "live_time_s": plain(recording.live_time_s, decimals=TIME_DECIMALS),
             "start_time_source": recording.start_time_source,
             "complete": recording.complete,
+        },
+    )
+
+
+def picks_entry(path: str, rows: Sequence[WhistlerRow], *, start_time: datetime | None) -> Entry:
+    """Return fitted picks as plain values; what only a recording has is None."""
+    recording = {"path": path, "start_time": iso_time(start_time), "duration_s": None}
+    return Entry(
+        recording={**recording, "sample_rate_hz": None, "channels": None, "notices": []},
+        whistlers=tuple(row_values(row) for row in rows),
+        provenance={
+            "path": path,
+            "sha256": hashlib.sha256(Path(path).read_bytes()).hexdigest(),
+            "complete": True,
         },
     )
 

@@ -12,6 +12,7 @@ CODES = {
     "E109": "the file changed while it was read",
     "E112": "sample rate or number of channels outside the supported range",
     "E113": "not a regular file, or not readable",
+    "E114": "no such channel",
     "N101": "the content is of another format than the name says",
     "W104": "truncated: the header announces more than there is",
     "W105": "the length in the header was never filled in",
@@ -22,6 +23,7 @@ CODES = {
     "W202": "clipping",
     "W206": "silence: one constant value for 0.1 s or more",
     "W207": "dead channel",
+    "E301": "the recording's date lies outside the tables of the Earth's field",
     "N301": "start time unknown",
     "E401": "a result cannot be written",
     "E402": "the output folder holds results of something else",
@@ -33,9 +35,10 @@ CODES = {
     "E601": "an option or setting outside its range",
     "E602": "a fault in the station file",
     "E603": "not a time",
-    "E604": "no such channel",
+    "E604": "a trace that no fit can use",
     "E605": "wrong use of the command line",
     "E606": "a fault in a table of picks",
+    "E610": "a fault in the description of a synthetic recording",
     "E701": "an internal fault; the message names the record of it",
 }
 """Every message code: a letter (E error, W warning, N note) and three digits.
@@ -143,3 +146,17 @@ class BusyError(WhistlerError, OSError):
     """An output folder that another run is using."""
 
     exit_code = 75
+
+
+class Stopped(BaseException):
+    """A signal asked the program to stop; not an :class:`Exception`, so nothing swallows it.
+
+    Parameters
+    ----------
+    signal_number : int
+        The signal.
+    """
+
+    def __init__(self, signal_number: int) -> None:
+        super().__init__(f"stopped by signal {signal_number}")
+        self.signal_number = signal_number

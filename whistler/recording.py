@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from whistler.audiofile import AudioFile
 from whistler.clock import StartTime, start_time
-from whistler.errors import Notice, RecordingError, UsageError
+from whistler.errors import Notice, RecordingError
 from whistler.station import Station
 from whistler.survey import Survey, Surveyor, mix
 
@@ -188,9 +188,7 @@ def open_recording(
     Raises
     ------
     RecordingError
-        When nothing in the file can be measured.
-    UsageError
-        When there is no such channel.
+        When nothing in the file can be measured, or it has no such channel.
     """
     path = os.fspath(path)
     with AudioFile(path) as audio:
@@ -228,6 +226,16 @@ def open_recording(
         )
 
 
+def peek_start(path: str, *, station: Station | None = None) -> datetime | None:
+    """Return when a recording began without reading its samples; None when it cannot be told."""
+    try:
+        with AudioFile(path) as audio:
+            broadcast, rate = audio.broadcast, audio.sample_rate_hz
+    except RecordingError:
+        return None
+    return start_time(path, station=station, broadcast=broadcast, sample_rate_hz=rate).time
+
+
 def _channel(channel: int | str, *, channels: int, station: Station | None, path: str) -> int | str:
     """Return the channel as a number from 1 or ``"mean"``, after checking that it exists."""
     names = station.channel_names if station else ()
@@ -236,8 +244,8 @@ def _channel(channel: int | str, *, channels: int, station: Station | None, path
     if channel == "mean" or (isinstance(channel, int) and 1 <= channel <= channels):
         return channel
     known = ", ".join([*names, *(str(number + 1) for number in range(min(channels, 8))), "mean"])
-    raise UsageError(
-        Notice("E604", path, f"channel={channel} is not among {known}", "choose one of those")
+    raise RecordingError(
+        Notice("E114", path, f"channel={channel} is not among {known}", "choose one of those")
     )
 
 

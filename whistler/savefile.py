@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import contextlib
 import os
+import sys
 import tempfile
+import traceback
 from pathlib import Path
 
+from whistler import __version__
 from whistler.errors import Notice, OutputError
 
 
@@ -70,6 +73,21 @@ def unwritable(path: Path, error: OSError) -> OutputError:
     """Return the error that says why a path cannot be written."""
     reason = f"cannot be written ({error.strerror or error})"
     return OutputError(Notice("E401", str(path), reason, "free or choose another place"))
+
+
+def save_fault(error: BaseException) -> Path:
+    """Return the file in the temporary folder that now holds the traceback of an error."""
+    descriptor, name = tempfile.mkstemp(prefix="whistler-fault-", suffix=".txt")
+    with os.fdopen(descriptor, "w", encoding="utf-8", errors="backslashreplace") as file:
+        file.write(f"whistler {__version__}, Python {sys.version}\n")
+        file.writelines(traceback.format_exception(error))
+    return Path(name)
+
+
+def fault_notice(path: str, error: BaseException) -> Notice:
+    """Return the line that reports an unexpected error, after saving its record."""
+    reason = f"internal fault ({type(error).__name__}: {str(error)[:160]})"
+    return Notice("E701", path, reason, f"please report it with its record, {save_fault(error)}")
 
 
 def _umask() -> int:

@@ -1,0 +1,78 @@
+"""``whistler fit``: fit hand-picked points."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from whistler.commands import common
+
+
+def fit(
+    picks: Annotated[
+        Path, typer.Argument(metavar="PICKS.csv", help="frequency_hz,time_s[,time_sd_s][,trace]")
+    ],
+    hops: Annotated[int, typer.Option("--hops", metavar="N", help="Field-line crossings.")] = 1,
+    sferic_time: Annotated[
+        float | None, typer.Option("--sferic-time", metavar="S", help="Causative sferic, s.")
+    ] = None,
+    sferic_time_sd: Annotated[
+        float, typer.Option("--sferic-time-sd", metavar="S", help="One-sigma of it, s.")
+    ] = 0.002,
+    lightning_time: Annotated[
+        float | None, typer.Option("--lightning-time", metavar="S", help="Lightning itself, s.")
+    ] = None,
+    l_value: Annotated[
+        float | None, typer.Option("--l-value", metavar="L", help="Fit the density for this L.")
+    ] = None,
+    date: Annotated[
+        str | None, typer.Option("--date", metavar="ISO8601", help="Time zero of the picks (UTC).")
+    ] = None,
+    station: common.StationOption = None,
+    out: common.OutOption = None,
+    json: common.JsonOption = False,
+    overwrite: common.OverwriteOption = False,
+    quiet: common.QuietOption = False,
+    verbose: common.VerboseOption = False,
+) -> None:
+    """Fit L, density and lightning time to hand-picked points.
+
+    Times count from one common zero. Traces of one file are taken as paths of one stroke.
+    """
+    from whistler.catalogue import (
+        document,
+        json_text,
+        picks_entry,
+        prepare_output,
+        write_catalogue,
+    )
+    from whistler.clock import parse_time
+    from whistler.commands.table import legend, rows_table
+    from whistler.fit import fit_picks
+    from whistler.picks import read_picks
+
+    settings = common.build_settings(station=station)
+    common.require_hops(hops)
+    zero = parse_time(date) if date else None
+    rows = fit_picks(
+        read_picks(picks),
+        settings=settings,
+        recording=str(picks),
+        hops=hops,
+        start_time=zero,
+        sferic_time_s=sferic_time,
+        sferic_time_sd_s=sferic_time_sd,
+        lightning_time_s=lightning_time,
+        l_value=l_value,
+    )
+    item = picks_entry(str(picks), rows, start_time=zero)
+    if out is not None:
+        prepare_output(out, paths=[str(picks)], settings=settings, overwrite=overwrite)
+        write_catalogue(out, [item], settings=settings)
+    if json:
+        print(json_text(document([item], settings), indent=1))
+    else:
+        print(rows_table(rows))
+        print(f"\n{legend()}")

@@ -1,0 +1,85 @@
+"""Rows of results as a table of at most 80 columns."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import NamedTuple
+
+from whistler.clock import iso_time
+from whistler.errors import printable
+from whistler.recording import Recording
+from whistler.rows import WhistlerRow
+
+WIDTH = 80
+STATUS_WORDS = {"undetermined": "undet", "at-bound": "bound", "prior-dominated": "prior"}
+LEGEND = (
+    "grp: rows of one lightning stroke. time: sferic, s from the first sample (* seen).",
+    "±: one-sigma given the model; (±): from not knowing profile, ionosphere and stroke.",
+    "n/cm3: equatorial electron density. D0: dispersion, s Hz^½. stat: - undetermined;",
+    "undet, bound, prior: no sigma: undetermined, at a bound, dominated by the prior.",
+)
+
+
+class _Field(NamedTuple):
+    title: str
+    width: int
+    show: Callable[[WhistlerRow], str]
+
+
+def _number(value: float, form: str) -> str:
+    return format(value, form) if value == value else "-"
+
+
+_FIELDS = (
+    _Field("grp", 3, lambda row: str(row.group)),
+    _Field("time", 10, lambda row: _number(row.sferic_time_s, ".3f") + " *"[row.sferic_seen]),
+    _Field("hop", 3, lambda row: str(row.hops)),
+    _Field("L", 6, lambda row: _number(row.l_value, ".3f")),
+    _Field("±", 5, lambda row: _number(row.l_value_sd, ".3f")),
+    _Field("(±)", 6, lambda row: f"({_number(row.l_value_profile_sd, '.2f')})"),
+    _Field("n/cm3", 7, lambda row: _number(row.equatorial_density_cm3, ".4g")),
+    _Field("±", 5, lambda row: _number(row.equatorial_density_sd_cm3, ".2g")),
+    _Field("(±)", 7, lambda row: f"({_number(row.equatorial_density_profile_sd_cm3, '.2g')})"),
+    _Field("D0", 5, lambda row: _number(row.dispersion_s_sqrt_hz, ".1f")),
+    _Field("dB", 4, lambda row: _number(row.snr_db, ".0f")),
+    _Field("stat", 5, lambda row: STATUS_WORDS.get(row.uncertainty_status, row.uncertainty_status)),
+)
+
+
+def recording_table(recording: Recording, rows: Sequence[WhistlerRow]) -> str:
+    """Return heading and table of one recording, without a legend.
+
+    Parameters
+    ----------
+    recording : Recording
+        For the heading.
+    rows : sequence of WhistlerRow
+        Its whistlers.
+
+    Returns
+    -------
+    str
+        Lines of at most 80 characters, except a long file name's.
+    """
+    began = iso_time(recording.start_time) or "unknown time"
+    lines = [
+        printable(recording.path),
+        f"  {recording.duration_s:.1f} s at {recording.sample_rate_hz} Hz from {began}",
+    ]
+    return "\n".join([*lines, rows_table(rows)])
+
+
+def rows_table(rows: Sequence[WhistlerRow]) -> str:
+    """Return a table of rows, or a line that says there are none."""
+    if not rows:
+        return "  no whistlers found"
+    head = " ".join(f"{field.title:>{field.width}}" for field in _FIELDS)
+    body = [
+        " ".join(f"{field.show(row):>{field.width}}" for field in _FIELDS).rstrip() for row in rows
+    ]
+    return "\n".join([head, *body])
+
+
+def legend() -> str:
+    """Return the lines that explain the columns."""
+    return "\n".join(LEGEND)
