@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -55,7 +55,7 @@ class Campaign:
     offset_sd_m: float = 400e3
     hidden_share: float = 0.1
     sferic_rate_hz: float = 20.0
-    medium: Medium = Medium()
+    medium: Medium = field(default_factory=Medium)
 
 
 def draw_scene(

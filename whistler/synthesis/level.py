@@ -1,11 +1,11 @@
 r"""The strength of a whistler in a background, and the factor that sets it.
 
-Definition. Both the whistler alone and the whistler-free background (with its sferics) are seen
-through Hann windows of 21.3 ms. The *noise* of a channel is the median over time of the background's
-power there, over ln 2, which is the mean power of Gaussian noise that has this median: sferics and
-other short signals hardly move it. The *signal* of a channel is the whistler's power in the cell
-centred on its true arrival :math:`t_l + h\,t(f)`. The *cell SNR* is the median over the channels of
-the band of signal over noise; `snr_db` is 10 log10 of it.
+Definition. The whistler alone and the background without it (but with its sferics) are both seen
+through Hann windows of 21.3 ms. The *noise* of a channel is the median over time of the power of
+the background there, over ln 2: the mean power of Gaussian noise that has this median, hardly moved
+by sferics and other short signals. The *signal* of a channel is the power of the whistler in the
+cell centred on its true arrival :math:`t_l + h\,t(f)`. The *cell SNR* is the median over the
+channels of the band of signal over noise; `snr_db` is 10 log10 of it.
 """
 
 from __future__ import annotations

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
 from fieldlines.errors import FloatArray
 from whistler.synthesis.parts import Mains
-from whistler.synthesis.response import receiver_response
+from whistler.synthesis.response import ComplexArray, receiver_response
 from whistler.synthesis.sferics import Band
 
 #: Points of the table of one period; at 120 harmonics linear reading errs by less than -90 dB.
@@ -61,7 +62,7 @@ def mains_hum(mains: Mains, generator: np.random.Generator, *, band: Band, frame
     amplitudes = _amplitudes(mains, generator, band)
     samples = np.zeros(frame_count)
     edges = np.concatenate(([-np.inf], steps, [np.inf]))
-    for begin_s, end_s in zip(edges[:-1], edges[1:], strict=True):
+    for begin_s, end_s in pairwise(edges):
         first, last = np.searchsorted(time_s, [begin_s, end_s + STEP_S])
         part = slice(int(first), int(last))
         window = _ramp(time_s[part] - begin_s) * (1.0 - _ramp(time_s[part] - end_s))
@@ -77,9 +78,9 @@ def _drift(mains: Mains, generator: np.random.Generator, time_s: FloatArray) -> 
     return np.asarray(mains.drift_hz * np.array([0.4, 0.6]) @ np.sin(angle))
 
 
-def _amplitudes(mains: Mains, generator: np.random.Generator, band: Band) -> FloatArray:
+def _amplitudes(mains: Mains, generator: np.random.Generator, band: Band) -> ComplexArray:
     """Complex amplitudes of the harmonics that fit into the band, r.m.s. sum as asked."""
-    order = np.arange(1, mains.harmonics + 1)
+    order = np.arange(1.0, mains.harmonics + 1.0)
     size = order**-1.7 * np.where(order % 2 == 1, 1.0, 0.35)
     size = size * np.exp(generator.normal(0.0, 0.5, order.size))
     frequency = order * mains.frequency_hz
@@ -87,10 +88,10 @@ def _amplitudes(mains: Mains, generator: np.random.Generator, band: Band) -> Flo
         receiver_response(frequency, sample_rate_hz=band.sample_rate_hz, low_cut_hz=band.low_cut_hz)
     )
     size *= mains.level * np.sqrt(2.0 / np.sum(size**2))
-    return size * np.exp(2j * np.pi * generator.random(order.size))
+    return np.asarray(size * np.exp(2j * np.pi * generator.random(order.size)))
 
 
-def _switched(amplitudes: FloatArray, generator: np.random.Generator) -> FloatArray:
+def _switched(amplitudes: ComplexArray, generator: np.random.Generator) -> ComplexArray:
     """Amplitudes after a load was switched: a random change of every harmonic."""
     change = generator.normal(0.0, 0.5, amplitudes.size) + 1j * generator.normal(
         0.0, 0.5, amplitudes.size
@@ -98,7 +99,7 @@ def _switched(amplitudes: FloatArray, generator: np.random.Generator) -> FloatAr
     return np.asarray(amplitudes + np.abs(amplitudes) * change)
 
 
-def _period(amplitudes: FloatArray) -> FloatArray:
+def _period(amplitudes: ComplexArray) -> FloatArray:
     spectrum = np.zeros(TABLE_SIZE // 2 + 1, dtype=complex)
     spectrum[1 : amplitudes.size + 1] = amplitudes
     period = np.fft.irfft(spectrum, TABLE_SIZE) * (TABLE_SIZE / 2)

@@ -12,7 +12,7 @@ from fieldlines.errors import FloatArray
 from whistler.synthesis.level import NoiseLevel, cell_snr, noise_level
 from whistler.synthesis.mains import mains_hum
 from whistler.synthesis.noise import hiss_noise, stationary_noise
-from whistler.synthesis.parts import Receiver, Sferics, refuse
+from whistler.synthesis.parts import Receiver, Sferics
 from whistler.synthesis.scene import Scene
 from whistler.synthesis.sferics import (
     Band,
@@ -26,7 +26,7 @@ from whistler.synthesis.sferics import (
 from whistler.synthesis.strokes import Stroke
 from whistler.synthesis.tones import chorus_elements, transmitter_signal
 from whistler.synthesis.truth import TraceTruth, Truth, WhistlerTruth
-from whistler.synthesis.wave import HopWave, Ray, hop_wave, prepare_ray
+from whistler.synthesis.wave import HopWave, Ray, hop_wave, prepare_ray, require_band
 from whistler.synthesis.waveguide import Guide
 
 #: Nominal distance of a stroke beside the receiver (even hops), m.
@@ -201,7 +201,7 @@ def _add_stroke(
     truths = []
     for path in stroke.paths:
         ray = prepare_ray(path, model=model)
-        _check_band(ray, scene)
+        require_band(path, high_hz=ray.high_hz, limit_hz=0.47 * scene.sample_rate_hz)
         for hops in path.hops:
             wave = hop_wave(
                 ray,
@@ -237,18 +237,6 @@ def _add_sferic(
         spectrum, time_s=time_s, peak=peak, band=band, frame_count=scene.frame_count
     )
     return peak
-
-
-def _check_band(ray: Ray, scene: Scene) -> None:
-    """Refuse a band that ends beyond the gyrofrequency or the recording."""
-    limit_hz = min(0.9 * ray.equatorial_gyrofrequency_hz, 0.47 * scene.sample_rate_hz)
-    if ray.edges_hz[1] > limit_hz or ray.low_hz >= ray.high_hz:
-        raise refuse(
-            ray.path, "frequency_high_hz",
-            f"makes the band {ray.low_hz:g} to {ray.high_hz:g} Hz, but the path and the sampling "
-            f"rate carry only what is below {limit_hz:.0f} Hz",
-            "lower the band limits or raise the sampling rate",
-        )  # fmt: skip
 
 
 def _truth(

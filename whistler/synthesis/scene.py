@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, fields
-from typing import Any
+from typing import Any, cast
 
 from whistler.synthesis.parts import (
     Chorus,
@@ -78,7 +78,7 @@ class Scene:
 
     def to_dict(self) -> dict[str, Any]:
         """Return the scene as plain nested values, None and empty parts left out."""
-        return _plain(self)
+        return cast(dict[str, Any], _plain(self))
 
 
 def _plain(part: Any) -> Any:

@@ -84,7 +84,7 @@ def pulse_spectrum(
     )
     spectrum *= np.exp(-2j * np.pi * frequency * LEAD_S)
     spectrum[0] = 0.0
-    return spectrum / np.abs(fft.irfft(spectrum, length)).max()
+    return np.asarray(spectrum / np.abs(fft.irfft(spectrum, length)).max())
 
 
 def draw_discharge(generator: np.random.Generator) -> Discharge:

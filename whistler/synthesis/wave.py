@@ -10,6 +10,7 @@ from scipy.interpolate import CubicSpline
 
 from fieldlines.errors import FloatArray
 from fieldlines.line import FieldLineModel
+from whistler.synthesis.parts import refuse
 from whistler.synthesis.phase import PathPhase, path_phase
 from whistler.synthesis.response import ComplexArray
 from whistler.synthesis.sferics import Band
@@ -17,6 +18,8 @@ from whistler.synthesis.strokes import Path
 
 #: Upper band limit when a path gives none, Hz, unless half the gyrofrequency is lower.
 HIGHEST_USUAL_HZ = 9500.0
+#: The band must end below this share of the equatorial gyrofrequency.
+HIGHEST_GYRO_SHARE = 0.9
 #: Half widths of the cosine band edges over the band limits (low, high).
 EDGE_SHARE = (0.12, 0.06)
 #: Sub-paths of a duct.
@@ -81,9 +84,15 @@ def prepare_ray(path: Path, *, model: FieldLineModel) -> Ray:
     -------
     Ray
         Phase over the band and band limits.
+
+    Raises
+    ------
+    UsageError
+        When the band is empty or ends above nine tenths of the equatorial gyrofrequency.
     """
     gyro_hz = model.dipole.equatorial_gyrofrequency(path.l_value)
     high_hz = path.frequency_high_hz or min(HIGHEST_USUAL_HZ, 0.5 * gyro_hz)
+    require_band(path, high_hz=high_hz, limit_hz=HIGHEST_GYRO_SHARE * gyro_hz)
     phase = path_phase(
         path.l_value,
         equatorial_density_m3=path.equatorial_density_cm3 * 1e6,
@@ -92,6 +101,31 @@ def prepare_ray(path: Path, *, model: FieldLineModel) -> Ray:
         high_hz=high_hz * (1.0 + EDGE_SHARE[1]),
     )
     return Ray(path, phase, path.frequency_low_hz, high_hz, gyro_hz)
+
+
+def require_band(path: Path, *, high_hz: float, limit_hz: float) -> None:
+    """Refuse a band that is empty or reaches beyond a limit.
+
+    Parameters
+    ----------
+    path : Path
+        The path, for its lower limit and the message.
+    high_hz, limit_hz : float
+        Upper band limit, and the highest frequency the path or the recording carries, Hz.
+
+    Raises
+    ------
+    UsageError
+        Naming the band and the limit.
+    """
+    if not path.frequency_low_hz < high_hz * (1.0 + EDGE_SHARE[1]) < limit_hz:
+        raise refuse(
+            path,
+            "frequency_high_hz",
+            f"makes the band {path.frequency_low_hz:.0f} to {high_hz:.0f} Hz, but nothing above "
+            f"{limit_hz:.0f} Hz is carried",
+            "lower the band limits or raise the sampling rate",
+        )
 
 
 def hop_wave(

@@ -127,7 +127,8 @@ def sferic_spectrum(
         magnetic = velocity**1.5 * np.exp(-NEPER_PER_DB * magnetic_db)
         electric = tweek * velocity**0.5 * np.exp(-NEPER_PER_DB * electric_db)
         total += np.exp(-2j * np.pi * cycles) * (magnetic + electric)
-    return np.sqrt(1j * frequency) * _current(frequency, discharge) * total / np.sqrt(distance_mm)
+    source = np.sqrt(1j * frequency) * _current(frequency, discharge)
+    return np.asarray(source * total / np.sqrt(distance_mm))
 
 
 def _mode_count(guide: Guide, highest_hz: float) -> int:
