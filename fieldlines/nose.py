@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from fieldlines.constants import SPEED_OF_LIGHT_M_S
+from fieldlines.errors import FloatArray
 from fieldlines.line import FieldLineModel, line_nodes
 from fieldlines.traveltime import maximum_frequency, plasma_frequency_squared, travel_time
 
@@ -64,22 +65,23 @@ def nose(l_value: float, *, equatorial_density_m3: float, model: FieldLineModel)
     '5006 Hz'
     """
 
-    def time(frequency_hz: np.ndarray) -> np.ndarray:
+    def time(frequency_hz: FloatArray) -> FloatArray:
         return travel_time(
             frequency_hz, l_value=l_value, equatorial_density_m3=equatorial_density_m3, model=model
         )
 
     grid_hz = np.linspace(0.05, 0.95, 46) * maximum_frequency(l_value, model=model)
     best = int(np.argmin(time(grid_hz)))
-    if best in (0, grid_hz.size - 1):
-        return Nose(float("nan"), float("nan"))
-    bracket = (grid_hz[best - 1], grid_hz[best + 1])
-    curve = np.polynomial.Chebyshev.interpolate(time, deg=12, domain=bracket)
-    roots = curve.deriv().roots()
-    inside = roots[(abs(roots.imag) < 1e-6 * grid_hz[best]) & (roots.real > bracket[0])]
-    inside = inside.real[inside.real < bracket[1]]
-    frequency_hz = float(inside[np.argmin(curve(inside))])
-    return Nose(frequency_hz, float(time(np.array([frequency_hz]))[0]))
+    if 0 < best < grid_hz.size - 1:
+        bracket = (float(grid_hz[best - 1]), float(grid_hz[best + 1]))
+        curve = np.polynomial.Chebyshev.interpolate(time, deg=12, domain=bracket)
+        roots = curve.deriv().roots()
+        real = roots.real[np.abs(roots.imag) < 1e-6 * bracket[0]]
+        inside = real[(real > bracket[0]) & (real < bracket[1])]
+        if inside.size:
+            frequency_hz = float(inside[np.argmin(curve(inside))])
+            return Nose(frequency_hz, float(time(np.array([frequency_hz]))[0]))
+    return Nose(float("nan"), float("nan"))
 
 
 def zero_frequency_dispersion(
