@@ -19,7 +19,7 @@ from whistler.riff import ByteWindow, RiffLayout, read_layout
 
 LOWEST_RATE_HZ, HIGHEST_RATE_HZ = 8_000, 200_000
 MAX_CHANNELS = 64
-PIECE_FRAMES = 65_536
+PIECE_FRAMES = 2**16
 SMALLEST_PIECE_FRAMES = 256  # what a read that meets damage may cost
 FIRST_STEP_FRAMES = 1_024
 LONGEST_STEP_FRAMES = 2**26

@@ -38,7 +38,7 @@ app = typer.Typer(
 def _print_version(asked: bool) -> None:
     if asked:
         print(f"whistler {__version__}")
-        raise typer.Exit
+        raise typer.Exit(0)
 
 
 @app.callback()

@@ -28,6 +28,7 @@ CODES = {
     "E401": "a result cannot be written",
     "E402": "the output folder holds results of something else",
     "E403": "the output folder is in use by another run",
+    "E404": "a file to be written exists and holds something else",
     "N401": "stopped by the user or the system",
     "N402": "nothing left to do",
     "W501": "saved state that cannot be used, measured again",
@@ -39,6 +40,11 @@ CODES = {
     "E605": "wrong use of the command line",
     "E606": "a fault in a table of picks",
     "E610": "a fault in the description of a synthetic recording",
+    "E611": "a fault in a scene file",
+    "E612": "dropouts in a scene, which a FLAC file cannot hold",
+    "E613": "two scenes of one name",
+    "E614": "neither scene files nor a path, or both",
+    "E615": "a list of hops that cannot be read",
     "E701": "an internal fault; the message names the record of it",
 }
 """Every message code: a letter (E error, W warning, N note) and three digits.
