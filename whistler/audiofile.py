@@ -20,7 +20,7 @@ from whistler.riff import ByteWindow, RiffLayout, read_layout
 LOWEST_RATE_HZ, HIGHEST_RATE_HZ = 8_000, 200_000
 MAX_CHANNELS = 64
 PIECE_FRAMES = 2**16
-SMALLEST_PIECE_FRAMES = 256  # what a read that meets damage may cost
+PROBE_FRAMES = 256  # read to see whether audio can be decoded again
 FIRST_STEP_FRAMES = 1_024
 LONGEST_STEP_FRAMES = 2**26
 UNKNOWN_FRAMES = 2**60  # larger totals in a header mean that nobody knows
@@ -126,7 +126,7 @@ class AudioFile:
             if data is not None:
                 position += len(data)
                 yield data
-            elif wanted > SMALLEST_PIECE_FRAMES:
+            elif wanted > 1:
                 wanted //= 4
                 self._reopen(position)
             else:
@@ -212,7 +212,7 @@ class AudioFile:
         end = self.declared_frames
         while end is not None and position + step < end and step <= LONGEST_STEP_FRAMES:
             target = position + step
-            if self._reopen(target) and self._read(SMALLEST_PIECE_FRAMES) is not None:
+            if self._reopen(target) and self._read(PROBE_FRAMES) is not None:
                 self._reopen(target)
                 return target
             step *= 2

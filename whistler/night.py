@@ -93,12 +93,12 @@ def measure_one(path: str, settings: Settings, *, start: datetime | None = None)
     -------
     Outcome
     """
-    from whistler.measure import measure_recording  # slow to import, and bad files come first
-
     try:
         recording = open_recording(
             path, station=settings.station, start=start, channel=settings.channel
         )
+        from whistler.measure import measure_recording  # slow to import: only for a usable file
+
         return Outcome(path, measurement=measure_recording(recording, settings))
     except OutputError:
         raise

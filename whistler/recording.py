@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import os
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime, timedelta
 
 import numpy as np
@@ -201,7 +201,7 @@ def open_recording(
         )
         for piece in audio.pieces():
             surveyor.add(piece)
-        survey = surveyor.result()
+        survey = _without_lost(surveyor.result(), audio.lost_frames)
         _check_length(path, survey.frame_count / audio.sample_rate_hz)
         begin = start_time(
             path,
@@ -247,6 +247,16 @@ def _channel(channel: int | str, *, channels: int, station: Station | None, path
     raise RecordingError(
         Notice("E114", path, f"channel={channel} is not among {known}", "choose one of those")
     )
+
+
+def _without_lost(survey: Survey, lost_frames: list[tuple[int, int]]) -> Survey:
+    """Return the survey without the silence that stands in for what could not be decoded."""
+    silent = tuple(
+        (start, end)
+        for start, end in survey.silent_frames
+        if not any(start < last and first < end for first, last in lost_frames)
+    )
+    return replace(survey, silent_frames=silent)
 
 
 def _check_length(path: str, duration_s: float) -> None:
