@@ -20,6 +20,11 @@ ComplexArray = npt.NDArray[np.complex128]
 
 #: One decibel as an exponent of amplitude.
 NEPER_PER_DB = np.log(10.0) / 20.0
+#: TEM mode: exp(-d K (i f / 1 kHz)^p) is causal for p below 1; 10 dB/Mm at 1 kHz, 1.8 at 100 Hz.
+TEM_EXPONENT = 0.75
+TEM_LOSS = 10.0 * NEPER_PER_DB / np.cos(0.5 * np.pi * TEM_EXPONENT)
+#: Decay of the amplitude of a wave that bounces up and down at the first cutoff, 1/s (0.5 dB/ms).
+DAMPING_PER_S = 60.0
 #: Time kept before the wave front, s, for the ringing of the band limits.
 LEAD_S = 0.002
 #: Length of a pulse, s: tweek tails have died away by then.
@@ -105,7 +110,8 @@ def sferic_spectrum(
 
     Notes
     -----
-    With :math:`S_m = \sqrt{1 - (f_m/f)^2}` (negative imaginary below cutoff)
+    With :math:`S_m = \sqrt{1 - (f_m/f)^2}` (negative imaginary below cutoff; the damping is a small
+    positive imaginary part of f_m)
 
     .. math:: E(f) = \sqrt{i f}\, I(f) \sum_m S_m^{3/2}
               e^{-2\pi i f (d/c) (S_m - 1)}\, 10^{-\alpha_m d / 20}
@@ -115,17 +121,15 @@ def sferic_spectrum(
     """
     frequency = np.maximum(frequency_hz, 1.0)
     distance_mm = distance_m * 1e-6
-    total = np.exp(-NEPER_PER_DB * 0.01 * frequency * distance_mm) + 0j
+    total = np.exp(-distance_mm * TEM_LOSS * (1j * frequency / 1000.0) ** TEM_EXPONENT)
     tweek = 10.0 ** (guide.tweek_db / 20.0)
     for mode in range(1, _mode_count(guide, float(frequency[-1])) + 1):
-        cutoff = cutoff_frequency(guide.height_m, mode=mode)
-        velocity = np.conj(np.sqrt(1.0 - (cutoff / frequency) ** 2 + 0j))
-        size = np.maximum(np.abs(velocity), 0.02)
-        magnetic_db = (2.0 + 5.0 * (4000.0 * mode / frequency) ** 3) / size * distance_mm
-        electric_db = 3.5 * mode / size * distance_mm
+        cutoff = mode * (cutoff_frequency(guide.height_m) + 1j * DAMPING_PER_S / (2.0 * np.pi))
+        velocity = np.conj(np.sqrt(np.conj(1.0 - (cutoff / frequency) ** 2)))
         cycles = frequency * distance_m / SPEED_OF_LIGHT_M_S * (velocity - 1.0)
-        magnetic = velocity**1.5 * np.exp(-NEPER_PER_DB * magnetic_db)
-        electric = tweek * velocity**0.5 * np.exp(-NEPER_PER_DB * electric_db)
+        loss_db = (2.0 + 5.0 * (4000.0 * mode / frequency) ** 3) / np.abs(velocity) * distance_mm
+        magnetic = velocity**1.5 * np.exp(-NEPER_PER_DB * loss_db)
+        electric = tweek * velocity**0.5 * np.exp(-NEPER_PER_DB * distance_mm)
         total += np.exp(-2j * np.pi * cycles) * (magnetic + electric)
     source = np.sqrt(1j * frequency) * _current(frequency, discharge)
     return np.asarray(source * total / np.sqrt(distance_mm))
