@@ -124,9 +124,9 @@ def curve_family(
     return CurveFamily(l_value, top_hz, log_density, log_frequency, np.log(time_s))
 
 
-def _spacing(family: CurveFamily, band_hz: tuple[float, float], width_s: float) -> tuple[
-    NDArray[np.float64], NDArray[np.float64]
-]:
+def _spacing(
+    family: CurveFamily, band_hz: tuple[float, float], width_s: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Metric of neighbouring densities: (densities, sum of squared lost-power weights)."""
     density = np.exp(np.linspace(family.log_density[0], family.log_density[-1], 24))
     frequency_hz = np.linspace(band_hz[0], min(band_hz[1], family.top_hz), 60)

@@ -17,7 +17,9 @@ from whistler.settings import Settings
 from whistler.sferic import SfericCatalogue, catalogue_sferics
 
 ANALYSIS_RATE_HZ = 24_000.0  # band to 12 kHz; lower input rates are kept as they are
-TRANSFORM_S = 65_536 / 48_000  # 1.4 s: 0.73 Hz resolution, and mains drift stays inside a bin or two
+TRANSFORM_S = (
+    65_536 / 48_000
+)  # 1.4 s: 0.73 Hz resolution, and mains drift stays inside a bin or two
 WHITENING_WINDOW_S = 512 / 24_000
 HUM_TOP_HZ = 3000.0
 HUM_TOLERANCE = 0.004  # the grid is held to 0.2 Hz of 50 Hz in ordinary times (common practice)
@@ -174,7 +176,9 @@ def _remove_mains(spectrum: NDArray[np.complex64], bin_hz: float, nominal_hz: fl
     top = min(int((HUM_TOP_HZ + 30.0) / bin_hz), len(spectrum))
     power = np.abs(spectrum[:top]) ** 2
     width = 2 * round(0.4 * nominal_hz / bin_hz) + 1
-    floor = ndimage.percentile_filter(power[::2], 40, width // 2) / 0.51  # mean of exponential power
+    floor = (
+        ndimage.percentile_filter(power[::2], 40, width // 2) / 0.51
+    )  # mean of exponential power
     floor = np.repeat(floor, 2)[:top] + np.finfo(np.float32).tiny
     excess = power / floor
     harmonics = np.arange(4, int(HUM_TOP_HZ / nominal_hz) + 1)
@@ -203,9 +207,7 @@ def _missing_at(usable: NDArray[np.bool_], length: int, plan: _BandPlan) -> NDAr
     return missing
 
 
-def _whiten(
-    audio: NDArray[np.float32], rate_hz: float, settings: Settings
-) -> NDArray[np.float32]:
+def _whiten(audio: NDArray[np.float32], rate_hz: float, settings: Settings) -> NDArray[np.float32]:
     """Flatten the median spectrum with a zero-phase filter and scale to unit robust sigma."""
     size = 2 * round(WHITENING_WINDOW_S * rate_hz / 2)
     level = _median_level(audio, size)

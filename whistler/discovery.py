@@ -164,7 +164,7 @@ def find_traces(
         null = search.null()
         threshold = null.threshold(0.5 * settings.false_alarms_per_hour)
         for detection in new:
-            if detection.candidate.strength >= threshold:
+            if detection.candidate.strength >= threshold and not _seen(detection, found):
                 rate = null.rate_per_hour(detection.candidate.strength)
                 kept = replace(
                     detection, candidate=replace(detection.candidate, false_alarms_per_hour=rate)
@@ -194,16 +194,35 @@ def _peel_off(
             left -= 1
             candidate = search.candidate(at, null)
             detection = follow(candidate, audio, spectrogram, model=model, resolution=resolution)
-            if detection is None:
-                curve_s, frequency_hz = candidate.curve_s, candidate.frequency_hz
-                thickness_s = candidate.thickness_s
-            else:
-                frequency_hz = candidate.frequency_hz
-                curve_s = detection.curve(model)(frequency_hz)
-                thickness_s = detection.reading.thickness_s
+            ridges = [(candidate.curve_s, candidate.thickness_s)]
+            if detection is not None:
+                curve_s = detection.curve(model)(candidate.frequency_hz)
+                ridges.append((curve_s, detection.reading.thickness_s))
                 yield detection
-            half = _half_width_s(frequency_hz, curve_s, thickness_s)
-            search.peel(frequency_hz, curve_s, half_width_s=half)
+            search.peel(
+                candidate.frequency_hz,
+                [
+                    (curve_s, _half_width_s(candidate.frequency_hz, curve_s, thickness_s))
+                    for curve_s, thickness_s in ridges
+                ],
+            )
+
+
+def _seen(detection: Detection, found: list[Detection]) -> bool:
+    """Whether a trace is one already found: what peeling left of it."""
+    points = detection.reading.trace
+    for other in found:
+        seen = other.reading.trace
+        apart = np.abs(
+            points.time_s - np.interp(points.frequency_hz, seen.frequency_hz, seen.time_s)
+        )
+        overlap = (points.frequency_hz >= seen.frequency_hz[0]) & (
+            points.frequency_hz <= seen.frequency_hz[-1]
+        )
+        near_s = 0.012 + 2.0 * max(other.reading.thickness_s, detection.reading.thickness_s)
+        if overlap.sum() >= 3 and np.median(apart[overlap]) < near_s:
+            return True
+    return False
 
 
 def _half_width_s(

@@ -23,6 +23,7 @@ CODES = {
     "W202": "clipping",
     "W206": "silence: one constant value for 0.1 s or more",
     "W207": "dead channel",
+    "E115": "a folder without recordings",
     "E301": "the recording's date lies outside the tables of the Earth's field",
     "N301": "start time unknown",
     "E401": "a result cannot be written",

@@ -9,22 +9,21 @@ position adds).
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
 from fieldlines import (
-    ChapmanLayer,
     FieldLineModel,
     saturated_density,
     travel_time,
     travel_time_jacobian,
 )
 from fieldlines.constants import EARTH_RADIUS_M, SPEED_OF_LIGHT_M_S
-from whistler.errors import Notice, UsageError
-from whistler.settings import Settings
+from fieldlines.errors import FloatArray
 from whistler.trace import Trace
 
 TIME_UNIT_S = 1e-3
@@ -32,8 +31,6 @@ L_LIMITS = (1.25, 7.5)
 DENSITY_LIMIT = 150.0  # factor either side of the climatology at L 3.2: room for five hops as one
 ROBUST_SCALE = 3.0
 OUTLIER_SIGMA = 4.5
-UNDETERMINED_LOG_L = 0.10  # one-sigma of ln L beyond which an L is not worth printing
-UNDETERMINED_LOG_DENSITY = 0.5
 
 
 @dataclass(frozen=True)
@@ -75,6 +72,32 @@ class SfericTime:
 
 
 @dataclass(frozen=True)
+class Ties:
+    """What is known beside the traces; every tie adds one residual.
+
+    Parameters
+    ----------
+    sferic : SfericTime, optional
+        The causative sferic.
+    lightning_time_s : tuple of float, optional
+        Time of the lightning itself with its one-sigma, from the recording's first frame.
+    l_value : float, optional
+        L to hold every path at.
+    density_prior_dex : float, optional
+        One-sigma, in decades, of the density about the climatology at the fitted L.
+    """
+
+    sferic: SfericTime | None = None
+    lightning_time_s: tuple[float, float] | None = None
+    l_value: float | None = None
+    density_prior_dex: float | None = None
+
+
+FREE = Ties()
+HELD = 1e-5  # one-sigma, in ln L, of an L that is given
+
+
+@dataclass(frozen=True)
 class StrokeFit:
     """Result of one joint fit.
 
@@ -96,15 +119,23 @@ class StrokeFit:
         Whether L or density of a path ended on a limit.
     """
 
-    log_l: NDArray[np.float64]
-    log_density: NDArray[np.float64]
+    log_l: FloatArray
+    log_density: FloatArray
     lightning_time_s: float
-    covariance: NDArray[np.float64]
-    rms_s: NDArray[np.float64]
+    covariance: FloatArray
+    rms_s: FloatArray
     chi_square: float
     freedom: int
     converged: bool
     at_bound: NDArray[np.bool_]
+
+    @property
+    def start(self) -> list[tuple[float, float]]:
+        """L and density of each path, to start another fit from."""
+        return [
+            (float(np.exp(a)), float(np.exp(b)))
+            for a, b in zip(self.log_l, self.log_density, strict=True)
+        ]
 
     @property
     def time_sd_s(self) -> float:
@@ -112,7 +143,7 @@ class StrokeFit:
         return float(np.sqrt(self.covariance[-1, -1]))
 
 
-def sferic_path_s(l_value: float | NDArray[np.float64]) -> float:
+def sferic_path_s(l_value: float | FloatArray) -> float:
     """Return the sferic's way from the conjugate foot to the receiver, s.
 
     Parameters
@@ -134,71 +165,117 @@ def sferic_path_s(l_value: float | NDArray[np.float64]) -> float:
     return float(2.0 * np.arccos(mean_l**-0.5) * EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S)
 
 
+def _unit(size: int, at: int) -> FloatArray:
+    vector = np.zeros(size)
+    vector[at] = 1.0
+    return vector
+
+
+def _tie(misfit: float, by_x: FloatArray, sd: float) -> tuple[FloatArray, FloatArray]:
+    return np.array([misfit / sd]), -by_x[None, :] / sd
+
+
+def sferic_at(
+    log_l: FloatArray, lightning_time_s: float, *, odd_hops: bool
+) -> tuple[float, FloatArray]:
+    """Return when the causative sferic reaches the receiver, and its derivatives.
+
+    Parameters
+    ----------
+    log_l : ndarray, shape (paths,)
+        ln L of the stroke's paths.
+    lightning_time_s : float
+        Time of the stroke.
+    odd_hops : bool
+        Whether it was in the conjugate hemisphere; else it was beside the receiver.
+
+    Returns
+    -------
+    float
+        Arrival, on the clock of `lightning_time_s`.
+    ndarray, shape (2 paths + 1,)
+        Derivatives with respect to ln L and ln density, path by path, and the time.
+    """
+    by_x = _unit(2 * len(log_l) + 1, -1)
+    if not odd_hops:
+        return lightning_time_s, by_x
+    l_values = np.exp(log_l)
+    mean_l = float(l_values.mean())
+    by_l = EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S / (mean_l * np.sqrt(mean_l - 1.0))
+    by_x[0:-1:2] = by_l * l_values / len(l_values)
+    return lightning_time_s + sferic_path_s(mean_l), by_x
+
+
 class _Problem:
     """Residuals and Jacobian of one stroke in scaled unknowns."""
 
     def __init__(
-        self,
-        traces: list[PathTrace],
-        sferic: SfericTime | None,
-        model: FieldLineModel,
-        epoch_s: float,
+        self, traces: Sequence[PathTrace], ties: Ties, model: FieldLineModel, epoch_s: float
     ) -> None:
         self.traces = traces
-        self.sferic = sferic
+        self.ties = ties
         self.model = model
         self.epoch_s = epoch_s
         self.paths = 1 + max(item.path for item in traces)
         self.kept = [np.ones(len(item.trace.time_s), bool) for item in traces]
 
-    def residual(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
-        return self._evaluate(x)[0]
+    def residual(self, x: FloatArray) -> FloatArray:
+        return self.evaluate(x)[0]
 
-    def jacobian(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
-        return self._evaluate(x)[1]
+    def jacobian(self, x: FloatArray) -> FloatArray:
+        return self.evaluate(x)[1]
 
-    def _evaluate(self, x: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        residuals, rows = [], []
+    def evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Residuals in sigmas and their derivatives: traces first, then ties."""
         time_s = self.epoch_s + x[-1] * TIME_UNIT_S
-        for item, kept in zip(self.traces, self.kept, strict=True):
-            trace = item.trace
-            l_value, density = np.exp(x[2 * item.path]), np.exp(x[2 * item.path + 1])
-            delay = travel_time_jacobian(
-                trace.frequency_hz[kept],
-                l_value=float(l_value),
-                equatorial_density_m3=float(density),
-                model=self.model,
-            )
-            sd = trace.time_sd_s[kept]
-            residuals.append((trace.time_s[kept] - time_s - item.hops * delay.time_s) / sd)
-            row = np.zeros((len(sd), len(x)))
-            row[:, 2 * item.path : 2 * item.path + 2] = (
-                -item.hops * delay.jacobian[:, :2] / sd[:, None]
-            )
-            row[:, -1] = -TIME_UNIT_S / sd
-            rows.append(row)
-        if self.sferic is not None:
-            value, slope = self._sferic_term(x, time_s)
-            residuals.append(np.array([value]))
-            rows.append(slope[None, :])
-        return np.concatenate(residuals), np.concatenate(rows)
+        parts = [
+            self._trace_part(item, kept, x, time_s)
+            for item, kept in zip(self.traces, self.kept, strict=True)
+        ]
+        parts += self._tie_parts(x, time_s)
+        return np.concatenate([part[0] for part in parts]), np.concatenate(
+            [part[1] for part in parts]
+        )
 
-    def _sferic_term(
-        self, x: NDArray[np.float64], time_s: float
-    ) -> tuple[float, NDArray[np.float64]]:
-        sferic = self.sferic
-        slope = np.zeros(len(x))
-        slope[-1] = -TIME_UNIT_S / sferic.sd_s  # type: ignore[union-attr]  # only called with one
-        way_s = 0.0
-        if sferic.odd_hops:  # type: ignore[union-attr]
-            l_values = np.exp(x[0:-1:2])
-            mean_l = float(l_values.mean())
-            way_s = sferic_path_s(mean_l)
-            by_l = EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S / (mean_l * np.sqrt(mean_l - 1.0))
-            slope[0:-1:2] = -by_l * l_values / len(l_values) / sferic.sd_s  # type: ignore[union-attr]
-        return (sferic.time_s - way_s - time_s) / sferic.sd_s, slope  # type: ignore[union-attr]
+    def _trace_part(
+        self, item: PathTrace, kept: NDArray[np.bool_], x: FloatArray, time_s: float
+    ) -> tuple[FloatArray, FloatArray]:
+        trace, first = item.trace, 2 * item.path
+        delay = travel_time_jacobian(
+            trace.frequency_hz[kept],
+            l_value=float(np.exp(x[first])),
+            equatorial_density_m3=float(np.exp(x[first + 1])),
+            model=self.model,
+        )
+        sd = trace.time_sd_s[kept]
+        row = np.zeros((len(sd), len(x)))
+        row[:, first : first + 2] = -item.hops * delay.jacobian[:, :2] / sd[:, None]
+        row[:, -1] = -TIME_UNIT_S / sd
+        return (trace.time_s[kept] - time_s - item.hops * delay.time_s) / sd, row
 
-    def limits(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    def _tie_parts(self, x: FloatArray, time_s: float) -> list[tuple[FloatArray, FloatArray]]:
+        ties, parts = self.ties, []
+        if ties.sferic is not None:
+            predicted_s, by_x = sferic_at(x[0:-1:2], time_s, odd_hops=ties.sferic.odd_hops)
+            by_x[-1] *= TIME_UNIT_S
+            parts.append(_tie(ties.sferic.time_s - predicted_s, by_x, ties.sferic.sd_s))
+        if ties.lightning_time_s is not None:
+            wanted_s, sd_s = ties.lightning_time_s
+            parts.append(_tie(wanted_s - time_s, TIME_UNIT_S * _unit(len(x), -1), sd_s))
+        for path in range(self.paths):
+            first = 2 * path
+            if ties.l_value is not None:
+                parts.append(_tie(np.log(ties.l_value) - x[first], _unit(len(x), first), HELD))
+            if ties.density_prior_dex is not None:
+                expected = np.log(saturated_density(np.exp(x[first])))
+                # d ln n / d ln L of the climatology, over a step that its exponential law allows.
+                step = np.log(saturated_density(1.001 * np.exp(x[first]))) - expected
+                by_x = _unit(len(x), first + 1) - step / np.log(1.001) * _unit(len(x), first)
+                sd = ties.density_prior_dex * np.log(10.0)
+                parts.append(_tie(float(expected - x[first + 1]), by_x, sd))
+        return parts
+
+    def limits(self) -> tuple[FloatArray, FloatArray]:
         low = np.full(2 * self.paths + 1, -np.inf)
         high = np.full(2 * self.paths + 1, np.inf)
         for item in self.traces:
@@ -213,12 +290,12 @@ class _Problem:
 
 
 def fit_stroke(
-    traces: list[PathTrace],
+    traces: Sequence[PathTrace],
     *,
-    start: list[tuple[float, float]],
+    start: Sequence[tuple[float, float]],
     lightning_time_s: float,
     model: FieldLineModel,
-    sferic: SfericTime | None = None,
+    ties: Ties = FREE,
 ) -> StrokeFit:
     """Return L and density of every path of a stroke, and its time.
 
@@ -232,15 +309,15 @@ def fit_stroke(
         First guess, s from the recording's first frame.
     model : fieldlines.FieldLineModel
         Field, profile and ions.
-    sferic : SfericTime, optional
-        Ties the time; without it the time is free.
+    ties : Ties
+        What else is known; by default the time is free.
 
     Returns
     -------
     StrokeFit
         With covariance scaled by the misfit where that exceeds the stated sigmas.
     """
-    problem = _Problem(traces, sferic, model, lightning_time_s)
+    problem = _Problem(traces, ties, model, lightning_time_s)
     low, high = problem.limits()
     x = np.append(np.log(np.array(start)).ravel(), 0.0)
     x = np.clip(x, low + 1e-6, high - 1e-6)
@@ -266,7 +343,7 @@ def fit_stroke(
     return _summary(problem, final.x, bool(final.success), low, high)
 
 
-def _drop_outliers(problem: _Problem, x: NDArray[np.float64]) -> None:
+def _drop_outliers(problem: _Problem, x: FloatArray) -> None:
     residual = problem.residual(x)
     at = 0
     for k, kept in enumerate(problem.kept):
@@ -280,12 +357,12 @@ def _drop_outliers(problem: _Problem, x: NDArray[np.float64]) -> None:
 
 def _summary(
     problem: _Problem,
-    x: NDArray[np.float64],
+    x: FloatArray,
     converged: bool,
-    low: NDArray[np.float64],
-    high: NDArray[np.float64],
+    low: FloatArray,
+    high: FloatArray,
 ) -> StrokeFit:
-    residual, jacobian = problem._evaluate(x)
+    residual, jacobian = problem.evaluate(x)
     freedom = max(len(residual) - len(x), 1)
     chi_square = float(residual @ residual)
     normal = jacobian.T @ jacobian
@@ -313,125 +390,16 @@ def _summary(
     )
 
 
-def profile_covariance(
-    fit: StrokeFit,
-    traces: list[PathTrace],
-    *,
-    model: FieldLineModel,
-    sferic: SfericTime | None,
-    settings: Settings,
-) -> NDArray[np.float64]:
-    """Return the variance of ln L and ln density from what the model leaves open.
-
-    Parameters
-    ----------
-    fit : StrokeFit
-        The fit under the default model.
-    traces : list of PathTrace
-        What was fitted.
-    model : fieldlines.FieldLineModel
-        The default model.
-    sferic : SfericTime or None
-        The time tie, if one was used.
-    settings : Settings
-        Declared one-sigmas: density exponent, foF2, hmF2, stroke distance.
-
-    Returns
-    -------
-    ndarray, shape (paths, 2)
-        Variances of ln L and ln density: half the change of the fit between plus and minus one
-        sigma of each source, squared and summed.
-    """
-    start = [(float(np.exp(a)), float(np.exp(b))) for a, b in zip(fit.log_l, fit.log_density, strict=True)]
-    total = np.zeros((len(start), 2))
-    for low, high in _model_pairs(model, sferic, settings):
-        ends = [
-            fit_stroke(
-                traces,
-                start=start,
-                lightning_time_s=fit.lightning_time_s,
-                model=varied,
-                sferic=tie,
-            )
-            for varied, tie in (low, high)
-        ]
-        change = np.stack(
-            [ends[1].log_l - ends[0].log_l, ends[1].log_density - ends[0].log_density], axis=1
-        )
-        total += (0.5 * change) ** 2
-    return total
-
-
-_Variant = tuple[FieldLineModel, SfericTime | None]
-
-
-def _model_pairs(
-    model: FieldLineModel, sferic: SfericTime | None, settings: Settings
-) -> list[tuple[_Variant, _Variant]]:
-    """The model one sigma below and above its default, source by source."""
-    pairs: list[tuple[_Variant, _Variant]] = []
-    exponents = [
-        max(model.density_exponent + sign * settings.density_exponent_sd, 0.0) for sign in (-1, 1)
-    ]
-    low, high = (replace(model, density_exponent=value) for value in exponents)
-    pairs.append(((low, sferic), (high, sferic)))
-    if model.layer is not None:
-        for name, spread in (
-            ("critical_frequency_hz", settings.fo_f2_sd_mhz * 1e6),
-            ("peak_altitude_m", settings.hm_f2_sd_km * 1e3),
-        ):
-            low, high = (replace(model, layer=_shifted(model.layer, name, sign * spread)) for sign in (-1, 1))
-            pairs.append(((low, sferic), (high, sferic)))
-    if sferic is not None:
-        way_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
-        early, late = (replace(sferic, time_s=sferic.time_s + sign * way_s) for sign in (-1, 1))
-        pairs.append(((model, early), (model, late)))
-    return pairs
-
-
-def _shifted(layer: ChapmanLayer, name: str, by: float) -> ChapmanLayer:
-    return replace(layer, **{name: max(getattr(layer, name) + by, 1e5)})
-
-
-def uncertainty_status(fit: StrokeFit, path: int) -> str:
-    """Return ``ok``, ``at-bound`` or ``undetermined`` for one path of a fit."""
-    if fit.at_bound[path]:
-        return "at-bound"
-    sd = np.sqrt(np.diag(fit.covariance)[2 * path : 2 * path + 2])
-    if not np.isfinite(sd).all() or sd[0] > UNDETERMINED_LOG_L or sd[1] > UNDETERMINED_LOG_DENSITY:
-        return "undetermined"
-    return "ok"
-
-
 def model_curve(
-    frequency_hz: NDArray[np.float64],
+    frequency_hz: FloatArray,
     *,
     l_value: float,
     density_m3: float,
     hops: int,
     lightning_time_s: float,
     model: FieldLineModel,
-) -> NDArray[np.float64]:
+) -> FloatArray:
     """Return arrival times of a fitted path, s from the recording's first frame, shape (n,)."""
     return lightning_time_s + hops * travel_time(
         frequency_hz, l_value=l_value, equatorial_density_m3=density_m3, model=model
     )
-
-
-def check_trace(name: str, trace: Trace) -> None:
-    """Refuse a trace that no fit can use.
-
-    Raises
-    ------
-    UsageError
-        Fewer than three points, or frequencies and times that are not positive and finite.
-    """
-    usable = (
-        np.isfinite(trace.frequency_hz).all()
-        and np.isfinite(trace.time_s).all()
-        and (trace.frequency_hz > 0).all()
-        and (trace.time_sd_s > 0).all()
-    )
-    if len(trace.time_s) < 3 or not usable:
-        reason = f"{len(trace.time_s)} usable points of positive frequency and sigma"
-        raise UsageError(Notice("E604", name, reason, "give at least three points per trace"))

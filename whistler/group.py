@@ -10,20 +10,31 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from fieldlines import FieldLineModel, saturated_density
-from fieldlines.constants import EARTH_RADIUS_M, SPEED_OF_LIGHT_M_S
-from whistler.fit import PathTrace, SfericTime, StrokeFit, fit_stroke, sferic_path_s
+from fieldlines.constants import SPEED_OF_LIGHT_M_S
+from fieldlines.errors import FloatArray
+from whistler.fit import PathTrace, SfericTime, StrokeFit, Ties, fit_stroke, sferic_at
 from whistler.settings import Settings
 from whistler.sferic import READING_SD_S, Causes, SfericCatalogue, possible_causes
 from whistler.trace import Trace
 
-HOP_PRIOR = (0.55, 0.25, 0.12, 0.05, 0.03, 0.01, 0.01, 0.01)  # our own estimate, from common practice
+HOP_PRIOR = (
+    0.55,
+    0.25,
+    0.12,
+    0.05,
+    0.03,
+    0.01,
+    0.01,
+    0.01,
+)  # our own estimate, from common practice
 TRAIN_PRIOR = 0.1  # share of traces with an echo partner in sight (our own estimate)
 STORM_SHARE = 0.1  # of the density prior, three times as wide: depleted and refilling tubes
 SURE = 0.9  # probability from which a sferic is taken as identified
-MODEL_FLOOR = np.array([0.008, 0.03, 0.0015])  # what two hops of one path may differ by in the model
+MODEL_FLOOR = np.array(
+    [0.008, 0.03, 0.0015]
+)  # what two hops of one path may differ by in the model
 
 
 @dataclass(frozen=True)
@@ -83,10 +94,8 @@ class _Reading:
     cause_probability: float
 
     @property
-    def mean(self) -> NDArray[np.float64]:
-        return np.array(
-            [self.fit.log_l[0], self.fit.log_density[0], self.fit.lightning_time_s]
-        )
+    def mean(self) -> FloatArray:
+        return np.array([self.fit.log_l[0], self.fit.log_density[0], self.fit.lightning_time_s])
 
 
 def group_strokes(
@@ -144,7 +153,7 @@ def _read_hops(
 
 def predicted_sferic(
     fit: StrokeFit, hops: int, settings: Settings
-) -> tuple[float, float, NDArray[np.float64]]:
+) -> tuple[float, float, FloatArray]:
     """Return where the causative sferic must be, its one-sigma, and its gradient.
 
     Parameters
@@ -161,23 +170,13 @@ def predicted_sferic(
     float, float, ndarray
         Time and sigma in s; derivatives with respect to the fit's unknowns.
     """
-    gradient = np.zeros(len(fit.covariance))
-    gradient[-1] = 1.0
-    way_s = 0.0
-    if hops % 2:
-        l_values = np.exp(fit.log_l)
-        mean_l = float(l_values.mean())
-        way_s = sferic_path_s(mean_l)
-        by_l = EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S / (mean_l * np.sqrt(mean_l - 1.0))
-        gradient[0:-1:2] = by_l * l_values / len(l_values)
+    time_s, gradient = sferic_at(fit.log_l, fit.lightning_time_s, odd_hops=hops % 2 == 1)
     place_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
     variance = gradient @ fit.covariance @ gradient + READING_SD_S**2 + place_s**2
-    return fit.lightning_time_s + way_s, float(np.sqrt(variance)), gradient
+    return time_s, float(np.sqrt(variance)), gradient
 
 
-def _weigh(
-    fit: StrokeFit, hops: int, sferics: SfericCatalogue, settings: Settings
-) -> _Reading:
+def _weigh(fit: StrokeFit, hops: int, sferics: SfericCatalogue, settings: Settings) -> _Reading:
     """Score one hop order: hop prior, sferic mixture and density prior together."""
     predicted_s, sd_s, gradient = predicted_sferic(fit, hops, settings)
     causes = possible_causes(sferics, predicted_s=predicted_s, sd_s=sd_s)
@@ -203,11 +202,11 @@ def _weigh(
 
 
 def _density_score(
-    log_l: NDArray[np.float64],
-    log_density: NDArray[np.float64],
+    log_l: FloatArray,
+    log_density: FloatArray,
     log_density_sd: float,
     settings: Settings,
-) -> NDArray[np.float64]:
+) -> FloatArray:
     """Log probability of a density under the prior: lognormal, with a wide share for storms."""
     expected = np.log(saturated_density(np.exp(np.clip(log_l, np.log(1.2), np.log(8.0)))))
     total = np.zeros_like(expected)
@@ -306,17 +305,11 @@ def _same_stroke(first: _Reading, second: _Reading) -> bool:
     return not both_sure and apart < 2.5 * spread + 0.001 and spread < 0.01
 
 
-def _paths(
-    members: list[int], partners: dict[tuple[int, int], float]
-) -> dict[int, int]:
+def _paths(members: list[int], partners: dict[tuple[int, int], float]) -> dict[int, int]:
     """Path index of each member: partners of a train share one."""
     path: dict[int, int] = {}
     for k in members:
-        shared = [
-            path[other]
-            for other in path
-            if (k, other) in partners or (other, k) in partners
-        ]
+        shared = [path[other] for other in path if (k, other) in partners or (other, k) in partners]
         path[k] = shared[0] if shared else 1 + max(path.values(), default=-1)
     return path
 
@@ -345,12 +338,12 @@ def _fit_group(
     if reading.cause_probability > SURE:
         at = float(sferics.time_s[reading.best_cause])
         sferic = SfericTime(at, READING_SD_S, hops[members[0]] % 2 == 1)
-        start = [
-            (float(np.exp(a)), float(np.exp(b)))
-            for a, b in zip(free.log_l, free.log_density, strict=True)
-        ]
         fit = fit_stroke(
-            traces, start=start, lightning_time_s=free.lightning_time_s, model=model, sferic=sferic
+            traces,
+            start=free.start,
+            lightning_time_s=free.lightning_time_s,
+            model=model,
+            ties=Ties(sferic),
         )
     return Stroke(
         tuple(members),

@@ -17,7 +17,7 @@ from fieldlines.errors import FieldlinesError
 from whistler import __version__
 from whistler.audiofile import ENDINGS
 from whistler.catalogue import CATALOGUE_FILES, Entry, entry, json_text, write_catalogue
-from whistler.errors import BusyError, Notice, OutputError, Stopped, WhistlerError
+from whistler.errors import BusyError, Notice, OutputError, RecordingError, Stopped, WhistlerError
 from whistler.recording import open_recording, peek_start
 from whistler.savefile import fault_notice, prepare_folder, unwritable, write_whole
 from whistler.settings import Settings
@@ -145,10 +145,15 @@ def measure_night(
     ------
     OutputError, BusyError
         When `out` cannot be written, belongs to something else, or is in use.
+    RecordingError
+        When the folder holds no recordings.
     """
     _claim(out, overwrite=overwrite)
     with _lock(out):
         paths = find_recordings(folder, settings=settings, out=out)
+        if not paths:
+            reason = "no recordings in this folder or below"
+            raise RecordingError(Notice("E115", str(folder), reason, "name another folder"))
         done: list[tuple[Entry | None, Notice | None]] = []
         measured = 0
         try:

@@ -11,8 +11,6 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldlines.density import ChapmanLayer
-from fieldlines.dipole import CentredDipole
 from fieldlines.line import FieldLineModel
 from fieldlines.nose import nose, zero_frequency_dispersion
 from fieldlines.traveltime import maximum_frequency, travel_time
@@ -20,7 +18,6 @@ from fieldlines.tube import tube_content
 from whistler.errors import Notice, UsageError
 from whistler.rows import TIME_DECIMALS, plain
 from whistler.savefile import write_whole
-from whistler.settings import Settings
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -78,27 +75,6 @@ class Prediction:
             "equatorial_gyrofrequency_hz": plain(self.equatorial_gyrofrequency_hz),
             "tube_content_m2": plain(self.tube_content_m2),
         }
-
-
-def field_line_model(settings: Settings, *, decimal_year: float) -> FieldLineModel:
-    """Return the field-line model that settings and a date ask for.
-
-    Parameters
-    ----------
-    settings : Settings
-        Density exponent, and the station's ionosphere.
-    decimal_year : float
-        Date of the dipole, 1900 to 2030.
-    """
-    station = settings.station
-    layer = ChapmanLayer(
-        station.critical_frequency_hz, station.peak_altitude_m, station.scale_height_m
-    )
-    return FieldLineModel(
-        CentredDipole.from_date(decimal_year),
-        density_exponent=settings.density_exponent,
-        layer=layer,
-    )
 
 
 def predict_path(

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,8 +15,9 @@ CLIP = 5.0  # times the mean noise power; costs 0.03 dB in noise and takes the r
 BAND_RATIO = 1.2  # width of a sub-band: a curve stays straight in it to a fraction of its own cell
 RANGE_STARTS_HZ = (0.0, 1200.0)
 RANGE_ENDS_HZ = (3600.0, 6200.0)
-MARGIN_S = 4.0  # around a peeled ridge, where the sums are made again
+MARGIN_S = 1.5  # around a peeled ridge, where the sums are made again
 NULL_WINDOW_S = 0.25
+NULL_STRIDE = 3  # every third template serves for the reversed recording
 
 
 @dataclass(frozen=True)
@@ -169,19 +170,28 @@ class CurveSearch:
             Judge by the weaker half of the windows only: for a first look at a recording whose
             whistlers, not yet peeled off, cross the reversed curves.
         """
+        plan = self._plan
         frames = len(self._best)
-        forward = self._best.copy(), self._which.copy(), self._rows.copy()
+        rows = np.zeros_like(self._rows)
         mirrored = np.ascontiguousarray(self._excess[::-1, :, ::-1])
-        self._sum(0, frames, mirrored)
-        self._maximise(0, frames)
-        reverse = self._best
-        self._best, self._which, self._rows = forward
-        return _gumbel(reverse, self._pair_s, (0.15, 0.5) if bulk else (0.5, 0.95))
-
-    def strongest(self) -> tuple[float, int]:
-        """Return the largest sum and its frame pair."""
-        at = int(np.argmax(self._best))
-        return float(self._best[at]), at
+        slope_sums(mirrored, plan.first_channel, plan.channel_count, plan.shift, rows, 0, frames)
+        best = np.full(frames, -1e9, np.float32)
+        template_maxima(
+            rows,
+            plan.row_index[::NULL_STRIDE],
+            plan.offset[::NULL_STRIDE],
+            plan.band_count[::NULL_STRIDE],
+            self._scale[::NULL_STRIDE],
+            self._starts,
+            self._ends,
+            best,
+            np.zeros(frames, np.int32),
+            0,
+            frames,
+        )
+        law = _gumbel(best, self._pair_s, (0.15, 0.5) if bulk else (0.5, 0.95))
+        # A whole bank has more chances than every third curve of it; as if they were independent.
+        return replace(law, location=law.location + law.scale * float(np.log(NULL_STRIDE)))
 
     def peaks(self, threshold: float, *, apart_s: float) -> list[int]:
         """Return frame pairs of the sums above `threshold`, strongest first, `apart_s` apart."""
@@ -203,7 +213,11 @@ class CurveSearch:
         last = self._best_end(template, first, at)
         edges = self._plan.edges_hz
         return self._describe(
-            template, at * self._pair_s + self._origin_s, (edges[first], edges[last]), strength, null
+            template,
+            at * self._pair_s + self._origin_s,
+            (edges[first], edges[last]),
+            strength,
+            null,
         )
 
     def _best_end(self, template: int, first: int, at: int) -> int:
@@ -246,25 +260,37 @@ class CurveSearch:
     def peel(
         self,
         frequency_hz: NDArray[np.float64],
-        curve_s: NDArray[np.float64],
-        *,
-        half_width_s: NDArray[np.float64],
+        ridges: list[tuple[NDArray[np.float64], NDArray[np.float64]]],
     ) -> None:
-        """Set the cells of a found ridge to the noise mean and make the sums near it again."""
+        """Set the cells of ridges to the noise mean and make the sums near them again.
+
+        Parameters
+        ----------
+        frequency_hz : ndarray, shape (n,)
+            Channels of the ridges.
+        ridges : list of (curve_s, half_width_s)
+            Middle and half width in time, each of shape (n,).
+        """
         channel = np.searchsorted(self.spectrogram.frequency_hz, frequency_hz)
         channel = np.minimum(channel, self._excess.shape[1] - 1)
-        frame_s = self._pair_s / 2
-        low = np.floor((curve_s - half_width_s - self._origin_s) / frame_s).astype(int)
-        high = np.ceil((curve_s + half_width_s - self._origin_s) / frame_s).astype(int)
         last = 2 * self._excess.shape[2] - 1
-        for c, a, b in zip(channel, np.clip(low, 0, last), np.clip(high, 0, last), strict=True):
-            for phase in (0, 1):
-                self._excess[phase, c, (a + 1 - phase) // 2 : (b - phase) // 2 + 1] = 0.0
+        first_frame, last_frame = last, 0
+        for curve_s, half_width_s in ridges:
+            low = self._frame(curve_s - half_width_s, last)
+            high = self._frame(curve_s + half_width_s, last)
+            for c, a, b in zip(channel, low, high, strict=True):
+                for phase in (0, 1):
+                    self._excess[phase, c, (a + 1 - phase) // 2 : (b - phase) // 2 + 1] = 0.0
+            first_frame, last_frame = min(first_frame, low.min()), max(last_frame, high.max())
         reach = round(MARGIN_S / self._pair_s)
-        start = max(0, int(low.min()) // 2 - reach)
-        stop = min(len(self._best), int(high.max()) // 2 + reach)
+        start = max(0, int(first_frame) // 2 - reach)
+        stop = min(len(self._best), int(last_frame) // 2 + reach)
         self._sum(start, stop)
         self._maximise(start, stop)
+
+    def _frame(self, time_s: NDArray[np.float64], last: int) -> NDArray[np.int64]:
+        frame = np.rint((time_s - self._origin_s) / (0.5 * self._pair_s)).astype(np.int64)
+        return np.clip(frame, 0, last)
 
 
 @dataclass(frozen=True)
@@ -338,9 +364,7 @@ def _range_scale(
     variance = np.maximum(0.5 * (high - low), 1e-3) ** 2
     templates, bands = plan.row_index.shape
     scale = np.zeros((templates, len(starts), bands + 1), np.float32)
-    by_band = np.where(
-        np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0
-    )
+    by_band = np.where(np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0)
     total = np.pad(np.cumsum(by_band, axis=1), ((0, 0), (1, 0)))
     for s, first in enumerate(starts):
         for b in range(first + 3, bands + 1):
@@ -350,9 +374,7 @@ def _range_scale(
     return scale
 
 
-def _gumbel(
-    best: NDArray[np.float32], pair_s: float, quantiles: tuple[float, float]
-) -> Null:
+def _gumbel(best: NDArray[np.float32], pair_s: float, quantiles: tuple[float, float]) -> Null:
     """Gumbel law through two quantiles of the window maxima; outliers do not move it."""
     size = max(1, round(NULL_WINDOW_S / pair_s))
     count = max(len(best) // size, 1)
@@ -365,8 +387,6 @@ def _gumbel(
     return Null(float(location), scale, size * pair_s)
 
 
-def reference_delay_s(
-    frequency_hz: NDArray[np.float64], curve_s: NDArray[np.float64]
-) -> float:
+def reference_delay_s(frequency_hz: NDArray[np.float64], curve_s: NDArray[np.float64]) -> float:
     """Time at which a curve passes the reference frequency."""
     return float(np.interp(REFERENCE_HZ, frequency_hz, curve_s))

@@ -158,9 +158,7 @@ def possible_causes(catalogue: SfericCatalogue, *, predicted_s: float, sd_s: flo
     return Causes(near, time_s, odds * _amplitude_ratio(catalogue, near))
 
 
-def _amplitude_ratio(
-    catalogue: SfericCatalogue, index: NDArray[np.int64]
-) -> NDArray[np.float64]:
+def _amplitude_ratio(catalogue: SfericCatalogue, index: NDArray[np.int64]) -> NDArray[np.float64]:
     """How much more likely each amplitude is for a causative sferic than for any other."""
     if len(index) == 0:
         return np.zeros(0)

@@ -50,7 +50,7 @@ def fit(
     )
     from whistler.clock import parse_time
     from whistler.commands.table import legend, rows_table
-    from whistler.fit import fit_picks
+    from whistler.pickfit import fit_picks
     from whistler.picks import read_picks
 
     settings = common.build_settings(station=station)

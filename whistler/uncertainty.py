@@ -1,0 +1,112 @@
+"""What the sigmas contain: the profile part, and whether a number is determined at all."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from fieldlines import ChapmanLayer, FieldLineModel
+from fieldlines.constants import SPEED_OF_LIGHT_M_S
+from fieldlines.errors import FloatArray
+from whistler.fit import PathTrace, StrokeFit, Ties, fit_stroke
+from whistler.settings import Settings
+
+UNDETERMINED_LOG_L = 0.10  # one-sigma of ln L beyond which an L is not worth printing
+UNDETERMINED_LOG_DENSITY = 0.5
+
+
+def profile_covariance(
+    fit: StrokeFit,
+    traces: Sequence[PathTrace],
+    *,
+    model: FieldLineModel,
+    ties: Ties,
+    settings: Settings,
+) -> FloatArray:
+    """Return the variance of ln L and ln density from what the model leaves open.
+
+    Parameters
+    ----------
+    fit : StrokeFit
+        The fit under the default model.
+    traces : list of PathTrace
+        What was fitted.
+    model : fieldlines.FieldLineModel
+        The default model.
+    ties : Ties
+        The ties of the fit.
+    settings : Settings
+        Declared one-sigmas: density exponent, foF2, hmF2, stroke distance.
+
+    Returns
+    -------
+    ndarray, shape (paths, 2)
+        Variances of ln L and ln density: half the change of the fit between plus and minus one
+        sigma of each source, squared and summed.
+    """
+    start = fit.start
+    total = np.zeros((len(start), 2))
+    for low, high in _model_pairs(model, ties, settings):
+        ends = [
+            fit_stroke(
+                traces,
+                start=start,
+                lightning_time_s=fit.lightning_time_s,
+                model=varied,
+                ties=tie,
+            )
+            for varied, tie in (low, high)
+        ]
+        change = np.stack(
+            [ends[1].log_l - ends[0].log_l, ends[1].log_density - ends[0].log_density], axis=1
+        )
+        total += (0.5 * change) ** 2
+    return total
+
+
+_Variant = tuple[FieldLineModel, Ties]
+
+
+def _model_pairs(
+    model: FieldLineModel, ties: Ties, settings: Settings
+) -> list[tuple[_Variant, _Variant]]:
+    """The model one sigma below and above its default, source by source."""
+    pairs: list[tuple[_Variant, _Variant]] = []
+    exponents = [
+        max(model.density_exponent + sign * settings.density_exponent_sd, 0.0) for sign in (-1, 1)
+    ]
+    low, high = (replace(model, density_exponent=value) for value in exponents)
+    pairs.append(((low, ties), (high, ties)))
+    if model.layer is not None:
+        for name, spread in (
+            ("critical_frequency_hz", settings.fo_f2_sd_mhz * 1e6),
+            ("peak_altitude_m", settings.hm_f2_sd_km * 1e3),
+        ):
+            low, high = (
+                replace(model, layer=_shifted(model.layer, name, sign * spread)) for sign in (-1, 1)
+            )
+            pairs.append(((low, ties), (high, ties)))
+    if ties.sferic is not None:
+        way_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
+        early, late = (
+            replace(ties, sferic=replace(ties.sferic, time_s=ties.sferic.time_s + sign * way_s))
+            for sign in (-1, 1)
+        )
+        pairs.append(((model, early), (model, late)))
+    return pairs
+
+
+def _shifted(layer: ChapmanLayer, name: str, by: float) -> ChapmanLayer:
+    return replace(layer, **{name: max(getattr(layer, name) + by, 1e5)})
+
+
+def uncertainty_status(fit: StrokeFit, path: int) -> str:
+    """Return ``ok``, ``at-bound`` or ``undetermined`` for one path of a fit."""
+    if fit.at_bound[path]:
+        return "at-bound"
+    sd = np.sqrt(np.diag(fit.covariance)[2 * path : 2 * path + 2])
+    if not np.isfinite(sd).all() or sd[0] > UNDETERMINED_LOG_L or sd[1] > UNDETERMINED_LOG_DENSITY:
+        return "undetermined"
+    return "ok"
