@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import errno
-import os
 import signal
 import sys
 import traceback
@@ -19,6 +18,7 @@ from whistler.commands.fit import fit
 from whistler.commands.measure import measure
 from whistler.commands.night import night
 from whistler.commands.predict import predict
+from whistler.commands.synthesize import synthesize
 from whistler.errors import Notice, Stopped, WhistlerError
 
 CANNOT_WRITE = 74
@@ -51,7 +51,7 @@ def _whistler(
     """L-values and electron densities, with error bars, from VLF recordings of whistlers."""
 
 
-for command in (measure, night, fit, predict):
+for command in (measure, night, fit, predict, synthesize):
     app.command()(command)
 
 
@@ -59,6 +59,7 @@ def main() -> None:
     """Run the command line of this process and exit with the code of the contract."""
     for number in SIGNALS:
         signal.signal(number, _stop)
+    common.speak_any_alphabet()
     sys.exit(run(sys.argv[1:]))
 
 
@@ -79,16 +80,19 @@ def run(arguments: list[str]) -> int:
         return int(code or 0)
     except Exception as error:
         return _failure(error, verbose=verbose)
+    except SystemExit:  # how typer reports a reader of standard output that has seen enough
+        common.mute_output()
+        return 0
     except Stopped as stop:
-        _finish_output()
-        common.show(Notice("N401", "whistler", str(stop), "what was done is saved"))
+        common.mute_output()
+        common.show(stop.notice)
         return 128 + stop.signal_number
 
 
 def _failure(error: Exception, *, verbose: bool) -> int:
     """Return the exit code of an error after showing its line."""
     if isinstance(error, BrokenPipeError):  # the reader has seen enough
-        _finish_output()
+        common.mute_output()
         return 0
     if verbose:
         traceback.print_exception(error)
@@ -99,7 +103,7 @@ def _failure(error: Exception, *, verbose: bool) -> int:
         common.show(_usage_notice(error))
         return 2
     if isinstance(error, OSError) and error.errno in (errno.ENOSPC, errno.EDQUOT, errno.EIO):
-        _finish_output()
+        common.mute_output()
         common.show(Notice("E401", "output", f"cannot be written ({error.strerror})", "free space"))
         return CANNOT_WRITE
     from fieldlines.errors import FieldlinesError
@@ -126,8 +130,3 @@ def _usage_notice(error: Exception) -> Notice:
 def _stop(number: int, frame: FrameType | None) -> None:
     signal.signal(number, signal.SIG_DFL)  # a second one ends it at once
     raise Stopped(number)
-
-
-def _finish_output() -> None:
-    """Send what is left in standard output nowhere, so that closing it at exit cannot fail."""
-    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -19,14 +19,18 @@ from whistler.trace import (
     LEAST_SNR,
     Curve,
     TraceReading,
+    coarse_thickness,
     median_snr_db,
     read_trace,
     straighten,
 )
 
 LEAST_SPAN_HZ = 1500.0
+WIDEST_S = 0.15  # lags looked at either side of a curve
+DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
 LEAST_SHARE = 0.4  # of the sub-bands inside the traced band that must have been timed
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
+FIRST_LOOK = 9.0  # sums above this are followed even where crowded whistlers raise the first null
 APART_S = 1.5  # between peaks handled in one round: their ridges do not touch
 
 
@@ -184,7 +188,7 @@ def _peel_off(
 ) -> Iterator[Detection]:
     """Follow and remove the strongest sums until only chance is left."""
     null = search.null(bulk=True)
-    threshold = null.threshold(0.5 * settings.false_alarms_per_hour)
+    threshold = min(null.threshold(0.5 * settings.false_alarms_per_hour), FIRST_LOOK)
     left = max(20, round(MOST_PER_MINUTE * spectrogram.power.shape[1] * spectrogram.hop_s / 60.0))
     while left > 0:
         peaks = search.peaks(threshold, apart_s=APART_S)
@@ -276,11 +280,22 @@ def follow(
     reference_s = reference_delay_s(candidate.frequency_hz, own(candidate.frequency_hz))
     time_s = candidate.time_s - reference_s
     reading = None
+    thickness_s: float | None = None
     for k, window_s in enumerate(resolution.windows_s):
         curve = one_hop_curve(l_value, density, time_s, model)
         band_hz = candidate.band_hz if k < 2 else _full_band(l_value, spectrogram, model)
-        view = straighten(audio, curve, band_hz=band_hz, reach_s=max(0.15, 1.5 * window_s))
-        reading = None if view is None else read_trace(view, curve, window_s=window_s)
+        view = straighten(audio, curve, band_hz=band_hz, reach_s=WIDEST_S)
+        if view is None:
+            return None
+        if k > 0:
+            thickness_s = coarse_thickness(view)
+        wide = thickness_s is not None and thickness_s > DIFFUSE_S
+        reading = read_trace(
+            view,
+            curve,
+            window_s=max(window_s, min(2.5 * (thickness_s or 0.0), WIDEST_S)),
+            thickness_s=thickness_s if wide else None,
+        )
         if reading is None:
             return None
         fit = fit_stroke(
@@ -289,8 +304,7 @@ def follow(
             lightning_time_s=time_s,
             model=model,
         )
-        l_value, density = float(np.exp(fit.log_l[0])), float(np.exp(fit.log_density[0]))
-        time_s = fit.lightning_time_s
+        (l_value, density), time_s = fit.start[0], fit.lightning_time_s
     if reading is None or not _borne_out(reading):
         return None
     curve = one_hop_curve(l_value, density, time_s, model)

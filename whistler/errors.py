@@ -162,8 +162,12 @@ class Stopped(BaseException):
     ----------
     signal_number : int
         The signal.
+    notice : Notice, optional
+        What to tell the user.
     """
 
-    def __init__(self, signal_number: int) -> None:
-        super().__init__(f"stopped by signal {signal_number}")
+    def __init__(self, signal_number: int, notice: Notice | None = None) -> None:
+        reason = f"stopped by signal {signal_number}"
+        super().__init__(reason)
         self.signal_number = signal_number
+        self.notice = notice or Notice("N401", "whistler", reason, "what was done is saved")

@@ -163,10 +163,10 @@ def measure_night(
                 measured += saved is None
                 done.append(saved or _measure_and_save(out, path, settings, tell=tell))
             progress(len(done), len(paths))
-        except Stopped:
+        except Stopped as stop:
             reason = f"stopped with {len(done)} of {len(paths)} recordings done"
-            tell(Notice("N401", str(out), reason, "run the same command again to go on"))
-            raise
+            notice = Notice("N401", str(out), reason, "run the same command again to go on")
+            raise Stopped(stop.signal_number, notice) from stop
         finally:
             entries = tuple(item for item, _ in done if item is not None)
             refused = tuple(notice for _, notice in done if notice is not None)

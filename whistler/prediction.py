@@ -111,7 +111,8 @@ def predict_path(
 
     Examples
     --------
-    >>> model = field_line_model(Settings(), decimal_year=2025.0)
+    >>> from fieldlines import CentredDipole
+    >>> model = FieldLineModel(CentredDipole.from_date(2025.0))
     >>> path = predict_path(3.0, density_cm3=900.0, model=model, frequencies_hz=[5000.0])
     >>> f"{path.time_s[0]:.1f} s"
     '1.2 s'

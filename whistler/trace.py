@@ -19,6 +19,8 @@ from whistler.cleaning import LN2, CleanAudio
 PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise is measured there
 SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
 NOISE_GAP_S = 0.12
+COARSE_S = 0.004  # smoothing under which the speckle of a thick trace runs together
+STACK_CLIP = 20.0
 LEAST_SNR = 6.0  # of a timed sub-band: chance peaks in the window exceed it once in thirty bands
 HANN_PULSE_WIDTH = 0.72  # half-power width of a Hann passband's pulse, in units of one over spacing
 TIMING_FACTOR = 0.551 * 1.2  # bound for a flat sub-band, and what peak-picking costs over it
@@ -178,7 +180,7 @@ class TraceReading:
 
 
 def read_trace(
-    view: Straightened, curve: Curve, *, window_s: float, least_snr: float = LEAST_SNR
+    view: Straightened, curve: Curve, *, window_s: float, thickness_s: float | None = None
 ) -> TraceReading | None:
     """Return the times of the sub-bands that rise above the noise near the curve.
 
@@ -190,8 +192,8 @@ def read_trace(
         The curve they were de-dispersed with.
     window_s : float
         Largest lag accepted.
-    least_snr : float
-        Smallest peak power over noise accepted.
+    thickness_s : float, optional
+        RMS thickness of the trace, when it is known to be wide; by default the stacked pulse tells.
 
     Returns
     -------
@@ -199,7 +201,8 @@ def read_trace(
         None when fewer than four sub-bands stand out.
     """
     step_s = view.lag_s[1] - view.lag_s[0]
-    thickness_s = _thickness(view, window_s)
+    if thickness_s is None:
+        thickness_s = _thickness(view, window_s)
     resolution_s = 0.6 / view.band_width_hz  # rms width of the squared Hann pulse, about
     kernel_s = np.hypot(thickness_s, 0.3 * resolution_s)
     smooth = ndimage.gaussian_filter1d(view.power, kernel_s / step_s, axis=1, mode="nearest")
@@ -211,7 +214,7 @@ def read_trace(
     lag = view.lag_s[inside][at] + _parabola(part, at) * step_s
     independent = 1.0 + np.sqrt(4 * np.pi) * kernel_s * view.band_width_hz
     # Averaging over the thickness lowers the chance peaks: the same margin in sigmas of the mean.
-    needed = 1.0 + (least_snr - 1.0) / np.sqrt(independent)
+    needed = 1.0 + (LEAST_SNR - 1.0) / np.sqrt(independent)
     kept = (peak >= needed) & ~edge
     if kept.sum() < 4:
         return None
@@ -229,6 +232,37 @@ def _parabola(part: NDArray[np.float64], at: NDArray[np.int64]) -> NDArray[np.fl
     return np.where(bend < 0, 0.5 * (left - right) / np.where(bend < 0, bend, 1.0), 0.0)
 
 
+def coarse_thickness(view: Straightened) -> float:
+    """Return the RMS thickness seen at a resolution of a few ms; 0 for a thin trace.
+
+    Parameters
+    ----------
+    view : Straightened
+        De-dispersed envelopes over a wide range of lags.
+
+    Returns
+    -------
+    float
+        Sigma of the stacked pulse, s, beyond the smoothing; the speckle inside it is averaged out.
+    """
+    step_s = view.lag_s[1] - view.lag_s[0]
+    stack = np.minimum(view.power, STACK_CLIP).mean(axis=0)
+    stack = ndimage.gaussian_filter1d(stack, COARSE_S / step_s, mode="nearest")
+    sigma_s = _half_width(stack - np.percentile(stack, 20.0), step_s)
+    return float(np.sqrt(max(sigma_s**2 - 1.5 * COARSE_S**2, 0.0)))
+
+
+def _half_width(excess: NDArray[np.float64], step_s: float) -> float:
+    """Half-power width of the highest peak, as the sigma of a Gaussian."""
+    centre = int(np.argmax(excess))
+    half = 0.5 * excess[centre]
+    low = int(np.argmax(excess[centre::-1] < half))
+    high = int(np.argmax(excess[centre:] < half))
+    low = low if low > 0 else centre
+    high = high if high > 0 else len(excess) - 1 - centre
+    return (low + high - 1) * step_s / 2.355
+
+
 def _thickness(view: Straightened, window_s: float) -> float:
     """RMS width of the stacked pulse beyond the resolution of the sub-bands."""
     inside = np.abs(view.lag_s) <= window_s
@@ -239,12 +273,7 @@ def _thickness(view: Straightened, window_s: float) -> float:
     stack = (view.power[strong] / top[strong, None]).mean(axis=0)
     base = float(np.median(stack[~inside])) if (~inside).any() else 0.0
     excess = np.where(inside, stack - base, -np.inf)
-    centre = int(np.argmax(excess))
-    half = 0.5 * excess[centre]
-    low = centre - int(np.argmax(excess[centre::-1] < half))
-    high = centre + int(np.argmax(excess[centre:] < half))
-    # Half-power width of the peak, as the sigma of a Gaussian, less that of the Hann passband.
-    sigma_s = (high - low - 1) * (view.lag_s[1] - view.lag_s[0]) / 2.355
+    sigma_s = _half_width(excess, view.lag_s[1] - view.lag_s[0])
     own_s = HANN_PULSE_WIDTH * 0.75 / view.band_width_hz / 2.355
     return float(np.sqrt(max(sigma_s**2 - own_s**2, 0.0)))
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import io
+import os
 import sys
 from collections.abc import Sequence
 from pathlib import Path
@@ -68,10 +70,20 @@ class Reporter:
 
 
 def show(notice: Notice) -> None:
-    """Write one notice to standard error in whatever encoding that has."""
-    encoding = sys.stderr.encoding or "ascii"
-    line = str(notice).encode(encoding, "backslashreplace").decode(encoding)
-    print(line, file=sys.stderr, flush=True)
+    """Write one notice to standard error."""
+    print(notice, file=sys.stderr, flush=True)
+
+
+def speak_any_alphabet() -> None:
+    """Let a terminal show what its encoding lacks as escapes rather than fail on it."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
+
+
+def mute_output() -> None:
+    """Send standard output nowhere from now on, so that closing it at exit cannot fail either."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def build_settings(*, station: Path | None, channel: str = "1", **values: Any) -> Settings:

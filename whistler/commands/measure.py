@@ -94,19 +94,29 @@ class _Run:
                 write_catalogue(
                     self._out, self.entries, settings=self._settings, refused=self.refused
                 )
-        if self._table and self.entries:
-            print(legend())
+        if self.entries:
+            self._print(legend())
 
     def _show(self, measurement: Measurement) -> None:
         from whistler.commands.table import recording_table
 
-        if self._table:
-            print(recording_table(measurement.recording, measurement.rows), end="\n\n")
+        self._print(recording_table(measurement.recording, measurement.rows) + "\n")
         if self._out is None or not self._figures:
             return
         from whistler.figures import save_recording_figure
 
         save_recording_figure(measurement, self._figure_path(measurement.recording.path))
+
+    def _print(self, text: str) -> None:
+        """Print for reading; with a folder to fill, a reader who leaves does not end the work."""
+        if not self._table:
+            return
+        try:
+            print(text, flush=True)
+        except BrokenPipeError:
+            if self._out is None:
+                raise
+            common.mute_output()
 
     def _figure_path(self, path: str) -> Path:
         """Return a name for the figure that no other recording of this run has."""

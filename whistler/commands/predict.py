@@ -38,6 +38,7 @@ def predict(
     from whistler import prediction
     from whistler.catalogue import SCHEMA, json_text
     from whistler.clock import decimal_year, parse_time
+    from whistler.model import field_line_model
 
     settings = common.build_settings(station=station, density_exponent=alpha)
     common.require_hops(hops)
@@ -45,7 +46,7 @@ def predict(
     path = prediction.predict_path(
         l_value,
         density_cm3=density,
-        model=prediction.field_line_model(settings, decimal_year=year),
+        model=field_line_model(settings, decimal_year=year),
         hops=hops,
         frequencies_hz=_numbers(frequencies) if frequencies is not None else None,
     )
