@@ -34,7 +34,7 @@ NEAR_STROKE_M = 150e3
 #: Automatic gain leaves the strongest sample this far below full scale.
 HEADROOM = 10.0 ** (-1.0 / 20.0)
 #: Points of a true trace.
-TRACE_POINTS = 60
+TRACE_POINTS = 100
 
 
 @dataclass(frozen=True)

@@ -25,7 +25,7 @@ class Scene:
     Parameters
     ----------
     duration_s : float
-        Length.
+        Length, 0.5 to 1200 s: a recording is rendered in memory.
     sample_rate_hz : int
         Sampling rate.
     seed : int
@@ -68,7 +68,7 @@ class Scene:
     def __post_init__(self) -> None:
         """Check the ranges."""
         check_ranges(
-            self, duration_s=(0.5, 7200), sample_rate_hz=(8000, 200_000), seed=(0, 2**63 - 1)
+            self, duration_s=(0.5, 1200), sample_rate_hz=(8000, 200_000), seed=(0, 2**63 - 1)
         )
 
     @property
