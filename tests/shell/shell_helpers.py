@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import csv
+import io
 import re
 import subprocess
 from collections.abc import Callable
@@ -49,3 +51,8 @@ def noise(duration_s: float = 2.0, *, channels: int = 1, seed: int = 1) -> NDArr
 def write(path: Path, samples: NDArray[np.float32] | None = None, **options: object) -> Path:
     soundfile.write(path, noise() if samples is None else samples, RATE_HZ, **options)
     return path
+
+
+def table(path: Path) -> list[dict[str, str]]:
+    """The rows of a catalogue."""
+    return list(csv.DictReader(io.StringIO(path.read_text(encoding="utf-8"), newline="")))

@@ -56,8 +56,11 @@ def fit(
     settings = common.build_settings(station=station)
     common.require_hops(hops)
     zero = parse_time(date) if date else None
+    traces = read_picks(picks)
+    if out is not None:
+        prepare_output(out, paths=[str(picks)], settings=settings, overwrite=overwrite)
     rows = fit_picks(
-        read_picks(picks),
+        traces,
         settings=settings,
         recording=str(picks),
         hops=hops,
@@ -69,7 +72,6 @@ def fit(
     )
     item = picks_entry(str(picks), rows, start_time=zero)
     if out is not None:
-        prepare_output(out, paths=[str(picks)], settings=settings, overwrite=overwrite)
         write_catalogue(out, [item], settings=settings)
     if json:
         print(json_text(document([item], settings), indent=1))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from typing import NamedTuple
 
@@ -10,13 +11,12 @@ from whistler.errors import printable
 from whistler.recording import Recording
 from whistler.rows import WhistlerRow
 
-WIDTH = 80
 STATUS_WORDS = {"undetermined": "undet", "at-bound": "bound", "prior-dominated": "prior"}
 LEGEND = (
-    "grp: rows of one lightning stroke. time: sferic, s from the first sample (* seen).",
-    "±: one-sigma given the model; (±): from not knowing profile, ionosphere and stroke.",
-    "n/cm3: equatorial electron density. D0: dispersion, s Hz^½. stat: - undetermined;",
-    "undet, bound, prior: no sigma: undetermined, at a bound, dominated by the prior.",
+    "grp     rows of one lightning stroke share it; time: its sferic, s (* seen)",
+    "±, (±)  one-sigma given the model; from not knowing profile, ionosphere, stroke",
+    "n/cm3   equatorial electron density; D0: zero-frequency dispersion, s Hz^1/2",
+    "stat    ok, or why a sigma is missing: undet(ermined), bound, prior(-dominated)",
 )
 
 
@@ -27,7 +27,12 @@ class _Field(NamedTuple):
 
 
 def _number(value: float, form: str) -> str:
-    return format(value, form) if value == value else "-"
+    return format(value, form) if math.isfinite(value) else "-"
+
+
+def _density(value: float) -> str:
+    """Return a density or its sigma with about two significant digits, never with an exponent."""
+    return _number(value, ".0f" if value >= 10 else ".1f" if value >= 1 else ".2f")
 
 
 _FIELDS = (
@@ -37,9 +42,9 @@ _FIELDS = (
     _Field("L", 6, lambda row: _number(row.l_value, ".3f")),
     _Field("±", 5, lambda row: _number(row.l_value_sd, ".3f")),
     _Field("(±)", 6, lambda row: f"({_number(row.l_value_profile_sd, '.2f')})"),
-    _Field("n/cm3", 7, lambda row: _number(row.equatorial_density_cm3, ".4g")),
-    _Field("±", 5, lambda row: _number(row.equatorial_density_sd_cm3, ".2g")),
-    _Field("(±)", 7, lambda row: f"({_number(row.equatorial_density_profile_sd_cm3, '.2g')})"),
+    _Field("n/cm3", 7, lambda row: _density(row.equatorial_density_cm3)),
+    _Field("±", 5, lambda row: _density(row.equatorial_density_sd_cm3)),
+    _Field("(±)", 7, lambda row: f"({_density(row.equatorial_density_profile_sd_cm3)})"),
     _Field("D0", 5, lambda row: _number(row.dispersion_s_sqrt_hz, ".1f")),
     _Field("dB", 4, lambda row: _number(row.snr_db, ".0f")),
     _Field("stat", 5, lambda row: STATUS_WORDS.get(row.uncertainty_status, row.uncertainty_status)),
