@@ -87,6 +87,11 @@ def test_wrong_scene_names_key_and_next_step(text, said):
         (lambda: Stroke(1.0, (Path(3, 9, hops=(1,)), Path(3, 9, hops=(2,)))), "only even"),
         (lambda: Path(3.0, 900.0, frequency_high_hz=900.0), "not above frequency_low_hz"),
         (lambda: Sferics(near_m=5e6, far_m=1e6), "below near_m"),
+        (lambda: Hiss(3000.0, 2000.0), "not above low_hz"),
+        (
+            lambda: Scene(2.0, 16_000, 1, strokes=(Stroke(5.0, (Path(3.0, 9.0),)),)),
+            "lightning_time_s=5.0 is outside 0 to 2",
+        ),
     ],
 )
 def test_impossible_parts_are_refused(make, said):

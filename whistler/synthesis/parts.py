@@ -69,6 +69,10 @@ class Noise:
 
     atmospheric_db: float = 9.0
 
+    def __post_init__(self) -> None:
+        """Check the range."""
+        check_ranges(self, atmospheric_db=(-200, 80))
+
 
 @dataclass(frozen=True)
 class Sferics:
@@ -167,6 +171,12 @@ class Hiss:
     level_db: float = 10.0
     modulation: float = 0.3
 
+    def __post_init__(self) -> None:
+        """Check the ranges."""
+        check_ranges(self, low_hz=(0, 1e5), high_hz=(0, 1e5), level_db=(-40, 80), modulation=(0, 2))
+        if self.high_hz <= self.low_hz:
+            raise refuse(self, "high_hz", "is not above low_hz", "swap them")
+
 
 @dataclass(frozen=True)
 class Chorus:
@@ -224,7 +234,13 @@ class Transmitter:
 
     def __post_init__(self) -> None:
         """Check the ranges and the keying."""
-        check_ranges(self, frequency_hz=(100, 1e5), level_db=(-20, 80), period_s=(0.01, 1e4))
+        check_ranges(
+            self,
+            frequency_hz=(100, 1e5),
+            level_db=(-20, 80),
+            period_s=(0.01, 1e4),
+            span_hz=(-1e5, 1e5),
+        )
         if self.keying not in KEYINGS:
             raise refuse(self, "keying", f"is not one of {', '.join(KEYINGS)}", "choose one")
 
@@ -241,6 +257,10 @@ class Dropout:
 
     start_s: float
     duration_s: float
+
+    def __post_init__(self) -> None:
+        """Check the ranges."""
+        check_ranges(self, start_s=(0, 1e5), duration_s=(0, 1e5))
 
 
 @dataclass(frozen=True)

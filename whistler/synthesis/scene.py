@@ -70,6 +70,8 @@ class Scene:
         check_ranges(
             self, duration_s=(0.5, 1200), sample_rate_hz=(8000, 200_000), seed=(0, 2**63 - 1)
         )
+        for stroke in self.strokes:
+            check_ranges(stroke, lightning_time_s=(0, self.duration_s))
 
     @property
     def frame_count(self) -> int:
