@@ -50,6 +50,8 @@ WHISTLER_ORDER = [
     "curvesum",
     "search",
     "trace",
+    "pattern",
+    "pattern",
     "fit",
     "uncertainty",
     "group",

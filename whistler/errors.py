@@ -26,6 +26,7 @@ CODES = {
     "E115": "a folder without recordings",
     "E301": "the recording's date lies outside the tables of the Earth's field",
     "N301": "start time unknown",
+    "N302": "date unknown: the Earth's field of 2025.0 is used",
     "E401": "a result cannot be written",
     "E402": "the output folder holds results of something else",
     "E403": "the output folder is in use by another run",
