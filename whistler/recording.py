@@ -286,7 +286,9 @@ def _notices(
         reason = f"{nonfinite} of {total} samples are not finite numbers"
         yield Notice("W201", audio.path, reason, "left out")
     if clipped:
-        reason = f"{100 * clipped / total:.2g} % of the samples are clipped at full scale"
+        percent = 100 * clipped / total
+        shown = f"{percent:.2g}" if percent < 10 else f"{percent:.0f}"
+        reason = f"{shown} % of the samples are clipped at full scale"
         yield Notice("W202", audio.path, reason, "amplitudes and weak traces suffer")
     silent = sum(last - first for first, last in survey.silent_frames) / audio.sample_rate_hz
     if silent:

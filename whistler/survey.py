@@ -23,7 +23,7 @@ class Survey:
     nonfinite : ndarray of int, shape (channels,)
         Samples that are not numbers or infinite.
     clipped : ndarray of int, shape (channels,)
-        Samples at full scale beside another one.
+        Samples at full scale that repeat the one before: flat tops.
     dead : ndarray of bool, shape (channels,)
         Channels that hold one value from beginning to end.
     silent_frames : tuple of (int, int)
@@ -61,7 +61,7 @@ class Surveyor:
         self._frames = 0
         self._nonfinite = np.zeros(channels, np.int64)
         self._clipped = np.zeros(channels, np.int64)
-        self._at_full_scale = np.zeros((1, channels), bool)  # of the last frame seen
+        self._last_frame = np.zeros((1, channels), np.float32)
         self._low = np.full(channels, np.inf)
         self._high = np.full(channels, -np.inf)
         self._last = np.float32(np.nan)
@@ -78,6 +78,7 @@ class Surveyor:
         self._high = np.maximum(self._high, piece.max(axis=0))
         self._count_clipped(piece)
         self._find_silence(mix(piece, channel=self._channel))
+        self._last_frame = piece[-1:]
         self._frames += len(piece)
 
     def result(self) -> Survey:
@@ -94,10 +95,9 @@ class Surveyor:
     def _count_clipped(self, piece: NDArray[np.float32]) -> None:
         if max(self._high.max(), -self._low.min()) < self._full_scale:
             return  # nothing has reached full scale yet
-        full = np.concatenate([self._at_full_scale, np.abs(piece) >= self._full_scale])
-        beside = full[1:] & full[:-1]
-        self._clipped += beside.sum(axis=0)
-        self._at_full_scale = full[-1:]
+        both = np.concatenate([self._last_frame, piece])
+        flat = (both[1:] == both[:-1]) & (np.abs(piece) >= self._full_scale)
+        self._clipped += flat.sum(axis=0)
 
     def _find_silence(self, samples: NDArray[np.float32]) -> None:
         """Close runs of one value at every change of value."""
