@@ -114,9 +114,7 @@ def clean(
     audio, mains_hz = _band_limit(samples, plan, settings)
     missing = _missing_at(usable, len(audio), plan)
     whitened = _whiten(audio, plan.rate_hz, settings)
-    sferics, marked = catalogue_sferics(
-        whitened, sample_rate_hz=plan.rate_hz, band_high_hz=_top_hz(plan.rate_hz, settings)
-    )
+    sferics, marked = catalogue_sferics(whitened, sample_rate_hz=plan.rate_hz)
     blanked = marked | missing
     quiet = np.where(blanked, np.float32(0.0), whitened).astype(np.float32)
     return CleanAudio(

@@ -12,12 +12,14 @@ from fieldlines import FieldLineModel, maximum_frequency, travel_time
 from whistler.bank import DUCT_LIMIT, Bank, build_bank
 from whistler.cleaning import CleanAudio
 from whistler.fit import PathTrace, fit_stroke
+from whistler.pattern import align
 from whistler.search import Candidate, CurveSearch, Null, reference_delay_s
 from whistler.settings import Settings
 from whistler.spectrogram import Spectrogram
 from whistler.trace import (
     LEAST_SNR,
     Curve,
+    Trace,
     TraceReading,
     coarse_thickness,
     median_snr_db,
@@ -28,6 +30,11 @@ from whistler.trace import (
 LEAST_SPAN_HZ = 1500.0
 WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
+PATTERN_BAND_HZ = 700.0  # wide enough to tell sub-paths apart, narrow enough for a fair number
+PATTERN_SEARCH_S = 0.004
+PATTERN_ROUNDS = 2
+LEAST_BANDS = 5
+LEAST_CORRELATION = 0.5
 LEAST_SHARE = 0.4  # of the sub-bands inside the traced band that must have been timed
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
 FIRST_LOOK = 9.0  # sums above this are followed even where crowded whistlers raise the first null
@@ -305,13 +312,60 @@ def follow(
             model=model,
         )
         (l_value, density), time_s = fit.start[0], fit.lightning_time_s
+        if fit.at_bound[0]:
+            return None
     if reading is None or not _borne_out(reading):
         return None
+    reading, (l_value, density), time_s = _sharpen(
+        audio, reading, (l_value, density), time_s, model=model
+    )
     curve = one_hop_curve(l_value, density, time_s, model)
     snr_db = median_snr_db(
         spectrogram.power, spectrogram.frequency_hz, spectrogram.time_s, reading.trace, curve
     )
     return Detection(candidate, reading, l_value, density, time_s, snr_db)
+
+
+def _sharpen(
+    audio: CleanAudio,
+    reading: TraceReading,
+    start: tuple[float, float],
+    time_s: float,
+    *,
+    model: FieldLineModel,
+) -> tuple[TraceReading, tuple[float, float], float]:
+    """Time wider sub-bands against the pattern they share; keep the old points if they share none."""
+    low_hz, high_hz = reading.trace.frequency_hz[[0, -1]]
+    count = max(LEAST_BANDS, round((high_hz - low_hz) / PATTERN_BAND_HZ))
+    spacing_hz = (high_hz - low_hz) / count
+    for _ in range(PATTERN_ROUNDS):
+        curve = one_hop_curve(*start, time_s, model)
+        view = straighten(
+            audio, curve, band_hz=(low_hz, high_hz), spacing_hz=spacing_hz, reach_s=WIDEST_S
+        )
+        if view is None:
+            return reading, start, time_s
+        aligned = align(
+            view,
+            curve(view.frequency_hz) - time_s,
+            search_s=PATTERN_SEARCH_S,
+            thickness_s=reading.thickness_s,
+        )
+        kept = aligned.correlation >= LEAST_CORRELATION
+        if kept.sum() < LEAST_BANDS:
+            return reading, start, time_s
+        trace = Trace(
+            view.frequency_hz[kept],
+            curve(view.frequency_hz)[kept] + aligned.lag_s[kept],
+            aligned.lag_sd_s(view.band_width_hz)[kept],
+        )
+        fit = fit_stroke(
+            [PathTrace(trace, 1, 0)], start=[start], lightning_time_s=time_s, model=model
+        )
+        start, time_s = fit.start[0], fit.lightning_time_s
+    snr = view.power.max(axis=1)[kept]
+    sharper = TraceReading(trace, snr, reading.thickness_s, aligned.centre_share_sd)
+    return sharper, start, time_s
 
 
 def _full_band(

@@ -16,7 +16,13 @@ from fieldlines.constants import SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
 from whistler.fit import PathTrace, SfericTime, StrokeFit, Ties, fit_stroke, sferic_at
 from whistler.settings import Settings
-from whistler.sferic import READING_SD_S, Causes, SfericCatalogue, possible_causes
+from whistler.sferic import (
+    READING_SD_S,
+    Causes,
+    SfericCatalogue,
+    front_lag_s,
+    possible_causes,
+)
 from whistler.trace import Trace
 
 HOP_PRIOR = (
@@ -179,9 +185,10 @@ def predicted_sferic(
 def _weigh(fit: StrokeFit, hops: int, sferics: SfericCatalogue, settings: Settings) -> _Reading:
     """Score one hop order: hop prior, sferic mixture and density prior together."""
     predicted_s, sd_s, gradient = predicted_sferic(fit, hops, settings)
-    causes = possible_causes(sferics, predicted_s=predicted_s, sd_s=sd_s)
+    late_s = front_lag_s(predicted_s - fit.lightning_time_s)
+    causes = possible_causes(sferics, predicted_s=predicted_s + late_s, sd_s=sd_s)
     gain = fit.covariance @ gradient / sd_s**2
-    shift = (causes.time_s - predicted_s)[:, None] * gain
+    shift = (causes.time_s - late_s - predicted_s)[:, None] * gain
     tied_sd = np.sqrt(max(fit.covariance[1, 1] - gain[1] * (fit.covariance @ gradient)[1], 0.0))
     with_cause = _density_score(
         fit.log_l[0] + shift[:, 0], fit.log_density[0] + shift[:, 1], float(tied_sd), settings
@@ -336,7 +343,9 @@ def _fit_group(
     reading = _weigh(free, hops[members[0]], sferics, settings)
     sferic, fit = None, free
     if reading.cause_probability > SURE:
-        at = float(sferics.time_s[reading.best_cause])
+        predicted_s, _, _ = predicted_sferic(free, hops[members[0]], settings)
+        late_s = front_lag_s(predicted_s - free.lightning_time_s)
+        at = float(sferics.time_s[reading.best_cause]) - late_s
         sferic = SfericTime(at, READING_SD_S, hops[members[0]] % 2 == 1)
         fit = fit_stroke(
             traces,

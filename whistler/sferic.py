@@ -6,13 +6,13 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft, ndimage
+from scipy import ndimage
+
+from fieldlines.constants import SPEED_OF_LIGHT_M_S
 
 MARK_SIGMA = 4.0
-BAND_SIGMA = 2.5
-VOTES = 3  # parts of the band, of four, that a sferic fills at once; a whistler fills one or two
+LOCAL_S = 0.012  # a sferic is over within it; a whistler, at any frequency, is not
 GUARD_S = 0.001
-BAND_EDGES = (0.35, 0.53, 0.75)  # of the top: 3.5, 5.3, 7.5 kHz of 10, above the absorption band
 
 
 @dataclass(frozen=True)
@@ -44,7 +44,7 @@ class SfericCatalogue:
 
 
 def catalogue_sferics(
-    whitened: NDArray[np.float32], *, sample_rate_hz: float, band_high_hz: float
+    whitened: NDArray[np.float32], *, sample_rate_hz: float
 ) -> tuple[SfericCatalogue, NDArray[np.bool_]]:
     """Return the sferics in whitened audio and the samples they spoil.
 
@@ -54,9 +54,6 @@ def catalogue_sferics(
         Audio of unit robust variance.
     sample_rate_hz : float
         Its rate.
-    band_high_hz : float
-        Top of the band; four parts of it are tested apart, so that a strong whistler, narrow at any
-        one moment, is not taken for a sferic.
 
     Returns
     -------
@@ -65,42 +62,63 @@ def catalogue_sferics(
     ndarray, shape (n,), bool
         True where a sferic or its 1 ms guard spoils the sample.
     """
-    loud = np.abs(whitened) > MARK_SIGMA
-    if loud.any():
-        loud &= _broadband(whitened, sample_rate_hz, band_high_hz)
+    strength = np.abs(whitened)
+    loud = strength > MARK_SIGMA * _local_sigma(strength, sample_rate_hz)
     guard = max(1, round(GUARD_S * sample_rate_hz))
     marked = np.asarray(ndimage.maximum_filter1d(loud, 2 * guard + 1))
     starts = np.flatnonzero(np.diff(marked.astype(np.int8), prepend=0) == 1)
     stops = np.flatnonzero(np.diff(marked.astype(np.int8), append=0) == -1) + 1
-    strength = np.abs(whitened)
     amplitude = np.array([strength[a:b].max() for a, b in zip(starts, stops, strict=True)])
     time_s = np.where(starts > 0, starts + guard, np.argmax(loud)) / sample_rate_hz
     catalogue = SfericCatalogue(time_s, amplitude, len(whitened) / sample_rate_hz)
     return catalogue, marked
 
 
-def _broadband(
-    whitened: NDArray[np.float32], sample_rate_hz: float, band_high_hz: float
-) -> NDArray[np.bool_]:
-    """True where at least three of four parts of the band stand out together."""
-    total = int(fft.next_fast_len(len(whitened), real=True))
-    spectrum = fft.rfft(whitened, total)
-    edges_hz = (0.0, *(part * band_high_hz for part in BAND_EDGES), sample_rate_hz)
-    bins = [min(round(edge / sample_rate_hz * total), len(spectrum)) for edge in edges_hz]
-    half = round(0.5 * GUARD_S * sample_rate_hz)
-    votes = np.zeros(len(whitened), np.int8)
-    for low, high in zip(bins[:-1], bins[1:], strict=True):
-        part = np.zeros_like(spectrum)
-        part[low:high] = spectrum[low:high]
-        band = np.abs(fft.irfft(part, total)[: len(whitened)])
-        sigma = float(np.median(band[::7])) / 0.6745
-        votes += ndimage.maximum_filter1d(band, 2 * half + 1) > BAND_SIGMA * max(sigma, 1e-6)
-    return np.asarray(votes >= VOTES)
+def _local_sigma(strength: NDArray[np.float32], sample_rate_hz: float) -> NDArray[np.float32]:
+    """Robust sigma of the surroundings, at least one: raised by a whistler, not by a sferic."""
+    size = max(1, round(LOCAL_S * sample_rate_hz))
+    count = -(-len(strength) // size)
+    padded = np.pad(strength, (0, count * size - len(strength)), mode="edge")
+    sigma = np.median(padded.reshape(count, size), axis=1) / 0.6745
+    sigma = np.maximum(ndimage.uniform_filter1d(sigma, 3, mode="nearest"), 1.0)
+    return np.repeat(sigma, size)[: len(strength)].astype(np.float32)
 
 
 CAUSE_UNSEEN = 0.15  # prior share of causative sferics too weak to be catalogued (our own estimate)
 CAUSE_STRONGER = 0.7  # in ln amplitude: strokes that make whistlers are the strong ones
 READING_SD_S = 0.0005  # of a front on the whitened audio
+
+
+FRONT_HZ = 11_000.0  # what leads in the whitened audio: the top of the analysed band
+GUIDE_HEIGHT_M = 85e3  # at night (published tweek heights: 80-91 km)
+
+
+def front_lag_s(path_s: float) -> float:
+    r"""Return how late a catalogued front is behind a signal at the speed of light.
+
+    Parameters
+    ----------
+    path_s : float
+        Way through the Earth-ionosphere waveguide at the speed of light, s.
+
+    Returns
+    -------
+    float
+        Lag of the first mode at the frequency that leads.
+
+    Notes
+    -----
+    .. math:: \Delta t = t \left[(1 - (f_c / f)^2)^{-1/2} - 1\right], \quad f_c = c / 2h
+
+    for a flat guide with a sharp boundary (from first principles).
+
+    Examples
+    --------
+    >>> f"{1e3 * front_lag_s(0.040):.2f} ms"
+    '0.52 ms'
+    """
+    cutoff_hz = SPEED_OF_LIGHT_M_S / (2.0 * GUIDE_HEIGHT_M)
+    return float(path_s * ((1.0 - (cutoff_hz / FRONT_HZ) ** 2) ** -0.5 - 1.0))
 
 
 @dataclass(frozen=True)

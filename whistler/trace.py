@@ -172,11 +172,15 @@ class TraceReading:
         Peak power of each timed sub-band over its noise.
     thickness_s : float
         RMS thickness of the trace in time, beyond the sub-bands' own resolution.
+    centre_share_sd : float
+        One-sigma of where the trace is taken to be within its thickness, common to all points, as
+        a share of the travel time.
     """
 
     trace: Trace
     snr: NDArray[np.float64]
     thickness_s: float
+    centre_share_sd: float = 0.0
 
 
 def read_trace(
