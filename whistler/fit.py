@@ -45,11 +45,14 @@ class PathTrace:
         Field-line crossings.
     path : int
         Index of the path; hops of one echo train share it.
+    centre_share_sd : float
+        One-sigma, as a share of the travel time, of where the trace lies within its thickness.
     """
 
     trace: Trace
     hops: int
     path: int
+    centre_share_sd: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -368,6 +371,7 @@ def _summary(
     normal = jacobian.T @ jacobian
     covariance = np.linalg.pinv(normal, rcond=1e-14, hermitian=True)
     covariance *= max(1.0, chi_square / freedom)
+    covariance += np.diag(_centre_variance(problem))
     unit = np.ones(len(x))
     unit[-1] = TIME_UNIT_S
     rms = []
@@ -388,6 +392,19 @@ def _summary(
         converged=converged,
         at_bound=near.any(axis=1),
     )
+
+
+def _centre_variance(problem: _Problem) -> FloatArray:
+    """Variance of ln density from where the traces of each path lie within their thickness.
+
+    Delays grow with the root of the density: a share of the delay is half that of the density.
+    """
+    variance = np.zeros(2 * problem.paths + 1)
+    for path in range(problem.paths):
+        shares = [item.centre_share_sd for item in problem.traces if item.path == path]
+        if min(shares) > 0.0:
+            variance[2 * path + 1] = 4.0 / sum(share**-2 for share in shares)
+    return variance
 
 
 def model_curve(

@@ -53,12 +53,15 @@ class FoundTrace:
         The points.
     l_value, density_m3, lightning_time_s : float
         One-hop-equivalent fit.
+    centre_share_sd : float
+        One-sigma of where the trace lies within its thickness, as a share of the travel time.
     """
 
     trace: Trace
     l_value: float
     density_m3: float
     lightning_time_s: float
+    centre_share_sd: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -148,7 +151,7 @@ def _read_hops(
         if abs(prior_dex) > 6.0 * settings.density_prior_sd_dex and readings:
             continue
         fit = fit_stroke(
-            [PathTrace(item.trace, hops, 0)],
+            [PathTrace(item.trace, hops, 0, item.centre_share_sd)],
             start=[(item.l_value, density)],
             lightning_time_s=item.lightning_time_s,
             model=model,
@@ -332,7 +335,7 @@ def _fit_group(
     settings: Settings,
 ) -> Stroke:
     path = _paths(members, partners)
-    traces = [PathTrace(found[k].trace, hops[k], path[k]) for k in members]
+    traces = [PathTrace(found[k].trace, hops[k], path[k], found[k].centre_share_sd) for k in members]
     first_of = {p: k for k, p in reversed(path.items())}
     start = []
     for p in sorted(first_of):

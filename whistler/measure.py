@@ -170,7 +170,13 @@ def _rows(
     settings: Settings,
 ) -> list[WhistlerRow]:
     found = [
-        FoundTrace(item.reading.trace, item.l_value, item.density_m3, item.lightning_time_s)
+        FoundTrace(
+            item.reading.trace,
+            item.l_value,
+            item.density_m3,
+            item.lightning_time_s,
+            item.reading.centre_share_sd,
+        )
         for item in detections
     ]
     rows: list[WhistlerRow] = []

@@ -22,7 +22,7 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
-LAG_SD = 0.3  # in units of one over the band width; measured on synthetic ducts
+LAG_SD = 0.36  # in units of one over the band width; measured on synthetic ducts
 
 
 @dataclass(frozen=True)
