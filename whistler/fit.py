@@ -220,6 +220,8 @@ class _Problem:
         self.model = model
         self.epoch_s = epoch_s
         self.paths = 1 + max(item.path for item in traces)
+        self.clock = 2 * self.paths  # place of the time among the unknowns; trace centres follow
+        self.size = self.clock + 1 + len(traces)
         self.kept = [np.ones(len(item.trace.time_s), bool) for item in traces]
 
     def residual(self, x: FloatArray) -> FloatArray:
@@ -230,20 +232,22 @@ class _Problem:
 
     def evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Residuals in sigmas and their derivatives: traces first, then ties."""
-        time_s = self.epoch_s + x[-1] * TIME_UNIT_S
+        time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
         parts = [
-            self._trace_part(item, kept, x, time_s)
-            for item, kept in zip(self.traces, self.kept, strict=True)
+            self._trace_part(number, kept, x, time_s) for number, kept in enumerate(self.kept)
         ]
+        centres = np.arange(self.clock + 1, self.size)
+        parts.append((x[centres], np.eye(self.size)[centres]))
         parts += self._tie_parts(x, time_s)
         return np.concatenate([part[0] for part in parts]), np.concatenate(
             [part[1] for part in parts]
         )
 
     def _trace_part(
-        self, item: PathTrace, kept: NDArray[np.bool_], x: FloatArray, time_s: float
+        self, number: int, kept: NDArray[np.bool_], x: FloatArray, time_s: float
     ) -> tuple[FloatArray, FloatArray]:
-        trace, first = item.trace, 2 * item.path
+        item = self.traces[number]
+        trace, first, centre = item.trace, 2 * item.path, self.clock + 1 + number
         delay = travel_time_jacobian(
             trace.frequency_hz[kept],
             l_value=float(np.exp(x[first])),
@@ -252,35 +256,40 @@ class _Problem:
         )
         sd = trace.time_sd_s[kept]
         row = np.zeros((len(sd), len(x)))
-        row[:, first : first + 2] = -item.hops * delay.jacobian[:, :2] / sd[:, None]
-        row[:, -1] = -TIME_UNIT_S / sd
-        return (trace.time_s[kept] - time_s - item.hops * delay.time_s) / sd, row
+        stretch = item.hops * (1.0 + item.centre_share_sd * x[centre])
+        row[:, first : first + 2] = -stretch * delay.jacobian[:, :2] / sd[:, None]
+        row[:, self.clock] = -TIME_UNIT_S / sd
+        row[:, centre] = -item.hops * item.centre_share_sd * delay.time_s / sd
+        return (trace.time_s[kept] - time_s - stretch * delay.time_s) / sd, row
 
     def _tie_parts(self, x: FloatArray, time_s: float) -> list[tuple[FloatArray, FloatArray]]:
         ties, parts = self.ties, []
         if ties.sferic is not None:
-            predicted_s, by_x = sferic_at(x[0:-1:2], time_s, odd_hops=ties.sferic.odd_hops)
-            by_x[-1] *= TIME_UNIT_S
+            predicted_s, slope = sferic_at(
+                x[0 : self.clock : 2], time_s, odd_hops=ties.sferic.odd_hops
+            )
+            by_x = np.pad(slope, (0, self.size - len(slope)))
+            by_x[self.clock] *= TIME_UNIT_S
             parts.append(_tie(ties.sferic.time_s - predicted_s, by_x, ties.sferic.sd_s))
         if ties.lightning_time_s is not None:
             wanted_s, sd_s = ties.lightning_time_s
-            parts.append(_tie(wanted_s - time_s, TIME_UNIT_S * _unit(len(x), -1), sd_s))
+            parts.append(_tie(wanted_s - time_s, TIME_UNIT_S * _unit(self.size, self.clock), sd_s))
         for path in range(self.paths):
             first = 2 * path
             if ties.l_value is not None:
-                parts.append(_tie(np.log(ties.l_value) - x[first], _unit(len(x), first), HELD))
+                parts.append(_tie(np.log(ties.l_value) - x[first], _unit(self.size, first), HELD))
             if ties.density_prior_dex is not None:
                 expected = np.log(saturated_density(np.exp(x[first])))
                 # d ln n / d ln L of the climatology, over a step that its exponential law allows.
                 step = np.log(saturated_density(1.001 * np.exp(x[first]))) - expected
-                by_x = _unit(len(x), first + 1) - step / np.log(1.001) * _unit(len(x), first)
+                by_x = _unit(self.size, first + 1) - step / np.log(1.001) * _unit(self.size, first)
                 sd = ties.density_prior_dex * np.log(10.0)
                 parts.append(_tie(float(expected - x[first + 1]), by_x, sd))
         return parts
 
     def limits(self) -> tuple[FloatArray, FloatArray]:
-        low = np.full(2 * self.paths + 1, -np.inf)
-        high = np.full(2 * self.paths + 1, np.inf)
+        low = np.full(self.size, -np.inf)
+        high = np.full(self.size, np.inf)
         for item in self.traces:
             top_hz = float(item.trace.frequency_hz.max())
             reach = float(self.model.dipole.l_from_equatorial_gyrofrequency(1.08 * top_hz))
@@ -322,7 +331,7 @@ def fit_stroke(
     """
     problem = _Problem(traces, ties, model, lightning_time_s)
     low, high = problem.limits()
-    x = np.append(np.log(np.array(start)).ravel(), 0.0)
+    x = np.append(np.log(np.array(start)).ravel(), np.zeros(1 + len(traces)))
     x = np.clip(x, low + 1e-6, high - 1e-6)
     rough = least_squares(
         problem.residual,
@@ -366,13 +375,12 @@ def _summary(
     high: FloatArray,
 ) -> StrokeFit:
     residual, jacobian = problem.evaluate(x)
+    used = problem.clock + 1
     freedom = max(len(residual) - len(x), 1)
     chi_square = float(residual @ residual)
-    normal = jacobian.T @ jacobian
-    covariance = np.linalg.pinv(normal, rcond=1e-14, hermitian=True)
+    covariance = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)[:used, :used]
     covariance *= max(1.0, chi_square / freedom)
-    covariance += np.diag(_centre_variance(problem))
-    unit = np.ones(len(x))
+    unit = np.ones(used)
     unit[-1] = TIME_UNIT_S
     rms = []
     at = 0
@@ -380,11 +388,11 @@ def _summary(
         part = residual[at : at + kept.sum()] * item.trace.time_sd_s[kept]
         at += len(part)
         rms.append(float(np.sqrt(np.mean(part**2))))
-    near = np.minimum(x - low, high - x)[:-1].reshape(-1, 2) < 1e-3
+    near = np.minimum(x - low, high - x)[: problem.clock].reshape(-1, 2) < 1e-3
     return StrokeFit(
-        log_l=x[0:-1:2],
-        log_density=x[1:-1:2],
-        lightning_time_s=problem.epoch_s + float(x[-1]) * TIME_UNIT_S,
+        log_l=x[0 : problem.clock : 2],
+        log_density=x[1 : problem.clock : 2],
+        lightning_time_s=problem.epoch_s + float(x[problem.clock]) * TIME_UNIT_S,
         covariance=covariance * np.outer(unit, unit),
         rms_s=np.array(rms),
         chi_square=chi_square,
@@ -392,19 +400,6 @@ def _summary(
         converged=converged,
         at_bound=near.any(axis=1),
     )
-
-
-def _centre_variance(problem: _Problem) -> FloatArray:
-    """Variance of ln density from where the traces of each path lie within their thickness.
-
-    Delays grow with the root of the density: a share of the delay is half that of the density.
-    """
-    variance = np.zeros(2 * problem.paths + 1)
-    for path in range(problem.paths):
-        shares = [item.centre_share_sd for item in problem.traces if item.path == path]
-        if min(shares) > 0.0:
-            variance[2 * path + 1] = 4.0 / sum(share**-2 for share in shares)
-    return variance
 
 
 def model_curve(

@@ -22,6 +22,7 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
+CENTRE_SD = 0.75  # cells of a pattern are not all alike; measured on synthetic ducts
 LAG_SD = 0.36  # in units of one over the band width; measured on synthetic ducts
 
 
@@ -83,7 +84,7 @@ def align(
         lag_s=(shift_s + centre_s) * travel_s / reference_s,
         correlation=correlation,
         width_share=width_s / reference_s,
-        centre_share_sd=width_s / reference_s / np.sqrt(cells),
+        centre_share_sd=CENTRE_SD * width_s / reference_s / np.sqrt(cells),
     )
 
 

@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from matplotlib.container import ErrorbarContainer
     from matplotlib.image import AxesImage
     from matplotlib.lines import Line2D
+    from numpy.typing import NDArray
 
     from fieldlines import FieldLineModel
     from fieldlines.errors import FloatArray
@@ -38,7 +39,7 @@ STRENGTH_LABEL = "power over noise (dB)"
 VALID_SHARE = 0.5  # ducts guide up to this share of the equatorial gyrofrequency
 MOST_COLUMNS = 3000  # of an image; more are averaged
 CURVE_POINTS = 200
-CURVE_PT = 1.1
+CURVE_PT = 0.9
 LEAST_RESIDUAL_MS = 1.0
 LEAST_POWER = 1e-3
 
@@ -85,13 +86,13 @@ def draw_spectrogram(
     return image
 
 
-def _pooled(power: FloatArray, factor: int) -> FloatArray:
+def _pooled(power: NDArray[np.float32], factor: int) -> NDArray[np.float32]:
     """Mean of every `factor` columns; the last may average fewer."""
     if factor <= 1:
         return power
     starts = np.arange(0, power.shape[1], factor)
     counts = np.diff(np.append(starts, power.shape[1]))
-    return np.asarray(np.add.reduceat(power, starts, axis=1) / counts)
+    return np.asarray(np.add.reduceat(power, starts, axis=1) / counts, np.float32)
 
 
 def label_axes(ax: Axes, x_label: str, *y_label: str) -> None:
@@ -109,10 +110,10 @@ def draw_trace(row: WhistlerRow, ax: Axes, *, style: PathStyle) -> Line2D:
         row.trace.frequency_hz / 1e3,
         linestyle="none",
         marker=style.marker,
-        markersize=4.5,
+        markersize=3.8,
         color=style.colour,
         markeredgecolor="white",
-        markeredgewidth=0.6,
+        markeredgewidth=0.4,
         label=row_label(row),
         zorder=4,
     )
@@ -161,12 +162,12 @@ def draw_curve(
             curve_times(row, frequency_hz, model=model),
             frequency_hz / 1e3,
             color=style.colour,
-            linewidth=CURVE_PT,
-            path_effects=halo(CURVE_PT),
+            linewidth=CURVE_PT,  # no rim here: the whistler must show on both sides of its fit
             zorder=3,
         )
         if (low_hz, high_hz) != inner:
             line.set_dashes(style.dashes)
+            line.set_path_effects(halo(CURVE_PT))
         lines.append(line)
     return lines
 
@@ -315,19 +316,18 @@ def draw_time_line(
         given = np.nan_to_num([getattr(row, column.format("sd")) for row in chosen])
         open_sd = np.nan_to_num([getattr(row, column.format("profile_sd")) for row in chosen])
         style = path_style(hops - 1)
-        shared = {"color": style.colour, "linestyle": "none"}
-        label = f"{hops} hop{'s' if hops > 1 else ''}"
-        bars += [
-            ax.errorbar(time, value, yerr=np.hypot(given, open_sd), elinewidth=0.8, **shared),
-            ax.errorbar(
-                time,
-                value,
-                yerr=given,
-                elinewidth=2.4,
-                marker=style.marker,
-                markersize=4.5,
-                label=label,
-                **shared,
-            ),
-        ]
+        total = ax.errorbar(
+            time, value, yerr=np.hypot(given, open_sd), fmt="none", ecolor=style.colour
+        )
+        inner = ax.errorbar(
+            time,
+            value,
+            yerr=given,
+            fmt=style.marker,
+            color=style.colour,
+            markersize=4.5,
+            elinewidth=2.6,
+            label=f"{hops} hop{'s' if hops > 1 else ''}",
+        )
+        bars += [total, inner]
     return bars

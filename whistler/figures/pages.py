@@ -2,13 +2,11 @@
 
 from __future__ import annotations
 
-import io
 import math
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from pathlib import Path, PurePath
 from typing import TYPE_CHECKING
 
-from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
 from whistler.cleaning import clean
@@ -25,9 +23,25 @@ from whistler.figures.draw import (
     has_model,
     label_axes,
 )
+from whistler.figures.sheet import (
+    AXIS_IN,
+    KEY_IN,
+    LEFT_IN,
+    RIGHT_IN,
+    TITLE_IN,
+    WIDTH_IN,
+    Box,
+    NotebookFigure,
+    new_sheet,
+    place,
+    png_bytes,
+    write_key,
+    write_sentence,
+    write_title,
+)
 from whistler.figures.style import (
     TEXT_PT,
-    TITLE_PT,
+    PathStyle,
     path_style,
     row_label,
     shown_name,
@@ -39,6 +53,7 @@ from whistler.spectrogram import spectrogram
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
     from matplotlib.image import AxesImage
 
     from whistler.measure import Measurement
@@ -46,27 +61,27 @@ if TYPE_CHECKING:
     from whistler.rows import WhistlerRow
     from whistler.spectrogram import Spectrogram
 
-SAVED_DPI = 120
-SHOWN_DPI = 80  # in a notebook
 MOST_PANELS = 12
 WIDE_UP_TO = 2  # strokes that get the full width
-LEAD_S = 0.12  # shown before the sferic
+LEAD_S = 0.1  # shown before the stroke
+TAIL = 0.12  # shown after the last point, as a share of what is before it
 BLOCK_S = 120.0
-# Inches.
-WIDTH, LEFT, RIGHT, GAP = 12.0, 0.65, 0.3, 0.7
-TITLE, STRIP, AXIS, KEY, LINE = 0.62, 1.5, 0.62, 0.62, 0.165
-PANEL, RESIDUALS, BETWEEN = 2.2, 1.25, 0.12
+MINUTE_S = 60.0
+HOUR_S = 3600.0
+STRIP_IN = 1.5
+PANEL_IN = 2.2
+SCALE_IN = 0.75  # right of the strip, for the grey scale
+RESIDUALS_IN = 1.3
+BETWEEN_IN = 0.12
+GAP_IN = 0.75  # between columns, for the labels of the right one
+LINE_IN = 0.165
+CHARACTER_IN = 0.08  # of the numbers above the strip
 FOOTNOTE = (
-    "± one-sigma given the model; (±) from not knowing density profile, ionosphere and stroke "
-    "position. L: path; n: equatorial electron density."
+    "L: path. n: equatorial electron density. ±: one-sigma given the model; "
+    "(±): from not knowing density profile, ionosphere and place of the stroke."
 )
 
-
-class NotebookFigure(Figure):
-    """A figure that notebooks show by itself, once, whatever their backend."""
-
-    def _repr_png_(self) -> bytes:
-        return _png(self, dpi=SHOWN_DPI)
+Strokes = dict[int, list["WhistlerRow"]]
 
 
 def save_recording_figure(measurement: Measurement, path: Path) -> None:
@@ -84,13 +99,7 @@ def save_recording_figure(measurement: Measurement, path: Path) -> None:
     OutputError
         When it cannot be written.
     """
-    write_whole(Path(path), _png(plot_recording(measurement), dpi=SAVED_DPI))
-
-
-def _png(figure: Figure, *, dpi: int) -> bytes:
-    content = io.BytesIO()
-    figure.savefig(content, format="png", dpi=dpi, metadata={"Software": None})
-    return content.getvalue()
+    write_whole(Path(path), png_bytes(plot_recording(measurement)))
 
 
 def plot_recording(measurement: Measurement) -> NotebookFigure:
@@ -100,7 +109,7 @@ def plot_recording(measurement: Measurement) -> NotebookFigure:
     ----------
     measurement : Measurement
         What was measured. Of more than twelve strokes the strongest are enlarged. Without a
-        spectrogram, as in long recordings, L and density against time are shown instead.
+        spectrogram, as of long recordings, L and density against time are shown instead.
 
     Returns
     -------
@@ -108,42 +117,43 @@ def plot_recording(measurement: Measurement) -> NotebookFigure:
         A matplotlib figure.
     """
     strokes = _strokes(measurement.rows)
-    if not measurement.views and strokes:
-        return _time_line_figure(measurement)
+    if strokes and not measurement.views:
+        return _time_line_page(measurement)
     shown = _strongest(strokes)
     columns = 1 if len(shown) <= WIDE_UP_TO else 2
-    lines = [
-        max(len(rows) for rows in shown[first : first + columns])
+    heads = [
+        _head_in(max(map(len, shown[first : first + columns])))
         for first in range(0, len(shown), columns)
     ]
-    heights = [(count + 1.6) * LINE + PANEL + AXIS for count in lines]
-    strip = STRIP if shown else 2.0 * STRIP
-    figure = _sheet(TITLE + strip + AXIS + sum(heights) + KEY)
-    _write_title(figure, measurement, enlarged=len(shown), strokes=len(strokes))
+    strip_in = STRIP_IN if shown else 2.0 * STRIP_IN
+    top_in = TITLE_IN + strip_in + AXIS_IN
+    figure = new_sheet(top_in + sum(heads) + len(heads) * (PANEL_IN + AXIS_IN) + KEY_IN)
+    _head(figure, measurement.recording, measurement.settings, below=_found(strokes, shown))
     if measurement.views:
-        ax = _axes(figure, LEFT, TITLE, WIDTH - LEFT - RIGHT - 0.6, strip)
-        image = draw_overview(measurement, ax)
-        _scale(figure, image, TITLE, strip)
-    width = (WIDTH - LEFT - RIGHT - (columns - 1) * GAP) / columns
-    top = TITLE + strip + AXIS
+        box = Box(LEFT_IN, TITLE_IN, WIDTH_IN - LEFT_IN - SCALE_IN, strip_in)
+        _write_scale(figure, draw_overview(measurement, place(figure, box)), box)
+    width_in = (WIDTH_IN - LEFT_IN - RIGHT_IN - (columns - 1) * GAP_IN) / columns
     for number, rows in enumerate(shown):
         line, column = divmod(number, columns)
-        panel_top = top + sum(heights[:line]) + (lines[line] + 1.6) * LINE
-        _draw_stroke(measurement, rows, figure, (LEFT + column * (width + GAP), panel_top, width))
+        above_in = sum(heads[: line + 1]) + line * (PANEL_IN + AXIS_IN)
+        left_in = LEFT_IN + column * (width_in + GAP_IN)
+        _draw_stroke(
+            figure, Box(left_in, top_in + above_in, width_in, PANEL_IN), measurement, rows=rows
+        )
     if shown:
-        _draw_key(figure)
+        write_key(figure, FOOTNOTE)
     else:
-        _sentence(figure, "No whistlers found.")
+        write_sentence(figure, "No whistlers found.")
     return figure
 
 
 def plot_stroke(measurement: Measurement, group: int) -> NotebookFigure:
-    """Return the figure of one stroke: spectrogram with fits, and residuals.
+    """Return the figure of one stroke: spectrogram with fitted curves, and residuals.
 
     Parameters
     ----------
     measurement : Measurement
-        Holds the stroke and a spectrogram of it.
+        Holds the stroke.
     group : int
         Number of the stroke, as in its rows.
 
@@ -157,11 +167,12 @@ def plot_stroke(measurement: Measurement, group: int) -> NotebookFigure:
         known = ", ".join(map(str, strokes)) or "none"
         raise ValueError(f"group={group} is not among the strokes found ({known}); choose another")
     rows = strokes[group]
-    head = 0.1 + (len(rows) + 1.6) * LINE
-    figure = _sheet(head + 1.3 * PANEL + AXIS + KEY)
-    place = (LEFT, head, WIDTH - LEFT - RIGHT)
-    _draw_stroke(measurement, rows, figure, place, height=1.3 * PANEL)
-    _draw_key(figure)
+    top_in = 0.1 + _head_in(len(rows))
+    height_in = 1.4 * PANEL_IN
+    figure = new_sheet(top_in + height_in + AXIS_IN + KEY_IN)
+    box = Box(LEFT_IN, top_in, WIDTH_IN - LEFT_IN - RIGHT_IN, height_in)
+    _draw_stroke(figure, box, measurement, rows=rows)
+    write_key(figure, FOOTNOTE)
     return figure
 
 
@@ -173,23 +184,15 @@ def plot_spectrogram(recording: Recording, settings: Settings | None = None) -> 
     recording : Recording
         Opened recording.
     settings : Settings, optional
-        Band, mains frequency; the defaults by default.
+        Band and mains frequency; the defaults if left out.
     """
     settings = settings or Settings()
-    figure = _sheet(TITLE + 2.0 * STRIP + AXIS)
-    ax = _axes(figure, LEFT, TITLE, WIDTH - LEFT - RIGHT - 0.6, 2.0 * STRIP)
-    for block in recording.blocks(BLOCK_S):
-        audio = clean(
-            block.samples,
-            block.usable,
-            sample_rate_hz=float(recording.sample_rate_hz),
-            start_s=block.first_frame / recording.sample_rate_hz,
-            settings=settings,
-        )
-        image = draw_spectrogram(spectrogram(audio, band_low_hz=settings.band_low_hz), ax)
-    ax.set_xlim(0.0, recording.duration_s)
-    _scale(figure, image, TITLE, 2.0 * STRIP)
-    _title(figure, recording, settings, _described(recording))
+    height_in = 2.0 * STRIP_IN
+    figure = new_sheet(TITLE_IN + height_in + AXIS_IN)
+    box = Box(LEFT_IN, TITLE_IN, WIDTH_IN - LEFT_IN - SCALE_IN, height_in)
+    image = _draw_views(_views(recording, settings), place(figure, box), recording.duration_s)
+    _write_scale(figure, image, box)
+    _head(figure, recording, settings, below="before the search")
     return figure
 
 
@@ -203,22 +206,250 @@ def draw_overview(measurement: Measurement, ax: Axes) -> AxesImage:
     ax : matplotlib.axes.Axes
         Where to draw.
     """
-    images = [draw_spectrogram(view, ax) for view in measurement.views]
-    ax.set_xlim(0.0, measurement.recording.duration_s)
+    duration_s = measurement.recording.duration_s
+    image = _draw_views(measurement.views, ax, duration_s)
     strokes = _strokes(measurement.rows)
     for rows in strokes.values():
-        for number, row in enumerate(rows):
-            colour = path_style(number).colour
-            ax.plot(row.trace.time_s, row.trace.frequency_hz / 1e3, color=colour, linewidth=1.0)
         draw_sferic(rows[0], ax)
-    for at_s, text in _stroke_labels(strokes, measurement.recording.duration_s):
+        for number, row in enumerate(rows):
+            _mark_top(row, ax, path_style(number))
+    per_inch_s = duration_s / (WIDTH_IN - LEFT_IN - SCALE_IN)
+    starts = {group: _begin_s(rows) for group, rows in strokes.items()}
+    for at_s, text in stroke_labels(starts, character_s=CHARACTER_IN * per_inch_s):
         ax.text(
             at_s,
-            1.03,
+            1.04,
             text,
             transform=ax.get_xaxis_transform(),
             ha="center",
             va="bottom",
             fontsize=TEXT_PT,
         )
-    return images[-1]
+    return image
+
+
+def _mark_top(row: WhistlerRow, ax: Axes, style: PathStyle) -> None:
+    """Mark a trace at its upper end only: the strip is for seeing what was found and missed."""
+    if len(row.trace.time_s):
+        top = int(row.trace.frequency_hz.argmax())
+        ax.plot(
+            row.trace.time_s[top],
+            row.trace.frequency_hz[top] / 1e3,
+            color=style.colour,
+            marker=style.marker,
+            markersize=5.0,
+            markeredgecolor="white",
+            markeredgewidth=0.6,
+        )
+
+
+def stroke_labels(times_s: dict[int, float], *, character_s: float) -> list[tuple[float, str]]:
+    """Return places and texts that number strokes, crowded ones under one label.
+
+    Parameters
+    ----------
+    times_s : dict of int to float
+        Time of each stroke by its number.
+    character_s : float
+        Width of a character on the time axis.
+
+    Examples
+    --------
+    >>> stroke_labels({1: 2.0, 2: 10.0, 3: 10.1, 4: 10.3}, character_s=0.2)
+    [(2.0, '1'), (10.15, '2–4')]
+    """
+    crowds = [[(time_s, group)] for group, time_s in sorted(times_s.items(), key=lambda x: x[1])]
+    k = 0
+    while k + 1 < len(crowds):
+        (left_s, left), (right_s, right) = _crowd_label(crowds[k]), _crowd_label(crowds[k + 1])
+        if right_s - left_s < 0.5 * character_s * (len(left) + len(right) + 2):
+            crowds[k : k + 2] = [crowds[k] + crowds[k + 1]]
+            k = max(k - 1, 0)  # the wider label may now reach back
+        else:
+            k += 1
+    return [_crowd_label(crowd) for crowd in crowds]
+
+
+def _crowd_label(crowd: Sequence[tuple[float, int]]) -> tuple[float, str]:
+    groups = [group for _, group in crowd]
+    text = f"{min(groups)}–{max(groups)}" if len(groups) > 1 else str(groups[0])
+    return 0.5 * (crowd[0][0] + crowd[-1][0]), text
+
+
+def _strokes(rows: Iterable[WhistlerRow]) -> Strokes:
+    strokes: Strokes = {}
+    for row in rows:
+        strokes.setdefault(row.group, []).append(row)
+    return strokes
+
+
+def _strongest(strokes: Strokes) -> list[list[WhistlerRow]]:
+    """Rows of the strokes to enlarge, in the order of the catalogue."""
+
+    def strength_db(group: int) -> float:
+        return max((row.snr_db for row in strokes[group] if math.isfinite(row.snr_db)), default=0.0)
+
+    chosen = sorted(strokes, key=strength_db, reverse=True)[:MOST_PANELS]
+    return [rows for group, rows in strokes.items() if group in chosen]
+
+
+def _begin_s(rows: Sequence[WhistlerRow]) -> float:
+    """When a stroke happened, or else when its first trace begins."""
+    known = [row.sferic_time_s for row in rows if math.isfinite(row.sferic_time_s)]
+    return min(known or [float(row.trace.time_s.min()) for row in rows if len(row.trace.time_s)])
+
+
+def _window_s(rows: Sequence[WhistlerRow]) -> tuple[float, float]:
+    """The stretch of time that shows a stroke and all its traces."""
+    ends = [float(row.trace.time_s.max()) for row in rows if len(row.trace.time_s)]
+    begin_s = _begin_s(rows)
+    end_s = max([*ends, begin_s + LEAD_S])
+    sd_s = rows[0].sferic_time_sd_s
+    if not rows[0].sferic_seen and math.isfinite(sd_s):
+        begin_s -= sd_s
+    return begin_s - LEAD_S, end_s + TAIL * (end_s - begin_s)
+
+
+def _head_in(rows: int) -> float:
+    """Height above a panel for its heading and a line a row."""
+    return (rows + 1.5) * LINE_IN
+
+
+def _draw_stroke(
+    figure: Figure, box: Box, measurement: Measurement, *, rows: Sequence[WhistlerRow]
+) -> None:
+    """Draw one stroke's spectrogram with fits and, right of it, the residuals on the same axis."""
+    narrower_in = box.width_in - RESIDUALS_IN - BETWEEN_IN
+    ax = place(figure, box._replace(width_in=narrower_in))
+    window_s = _window_s(rows)
+    for view in measurement.views:
+        if view.time_s[0] < window_s[1] and window_s[0] < view.time_s[-1]:
+            draw_spectrogram(view, ax, time_limits_s=window_s)
+    band_hz = (measurement.settings.band_low_hz, measurement.settings.band_high_hz)
+    ax.set_xlim(window_s)
+    for number, row in enumerate(rows):
+        style = path_style(number)
+        draw_curve(row, ax, model=measurement.model, style=style, band_hz=band_hz)
+        draw_trace(row, ax, style=style)
+        draw_nose(row, ax, style=style)
+    draw_sferic(rows[0], ax)
+    _write_rows(ax, rows)
+    residuals = place(
+        figure,
+        box._replace(left_in=box.left_in + narrower_in + BETWEEN_IN, width_in=RESIDUALS_IN),
+    )
+    draw_residual_panel(rows, residuals, model=measurement.model)
+    residuals.set_ylim(ax.get_ylim())
+    residuals.set_ylabel("")
+    residuals.tick_params(labelleft=False)
+
+
+def _write_rows(ax: Axes, rows: Sequence[WhistlerRow]) -> None:
+    """Write the heading of a stroke and one line a row above its panel."""
+    handles = []
+    for number, row in enumerate(rows):
+        style = path_style(number)
+        handle = Line2D([], [], color=style.colour, marker=style.marker)
+        if not has_model(row):
+            handle.set_linestyle("none")
+        handles.append(handle)
+    ax.legend(
+        handles,
+        [row_label(row) for row in rows],
+        title=stroke_heading(rows[0]),
+        alignment="left",
+        loc="lower left",
+        bbox_to_anchor=(0.0, 1.0),
+        frameon=False,
+        borderpad=0.0,
+        borderaxespad=0.3,
+        labelspacing=0.15,
+        markerscale=0.8,
+        fontsize=TEXT_PT,
+        title_fontproperties={"size": TEXT_PT, "weight": "bold"},
+    )
+
+
+def _views(recording: Recording, settings: Settings) -> Iterable[Spectrogram]:
+    for block in recording.blocks(BLOCK_S):
+        audio = clean(
+            block.samples,
+            block.usable,
+            sample_rate_hz=float(recording.sample_rate_hz),
+            start_s=block.first_frame / recording.sample_rate_hz,
+            settings=settings,
+        )
+        yield spectrogram(audio, band_low_hz=settings.band_low_hz)
+
+
+def _draw_views(views: Iterable[Spectrogram], ax: Axes, duration_s: float) -> AxesImage:
+    image, *others = (draw_spectrogram(view, ax) for view in views)
+    bottom = min(item.get_extent()[2] for item in (image, *others))
+    top = max(item.get_extent()[3] for item in (image, *others))
+    ax.set(xlim=(0.0, duration_s), ylim=(bottom, top))
+    return image
+
+
+def _write_scale(figure: Figure, image: AxesImage, box: Box) -> None:
+    """Draw the grey scale right of a spectrogram."""
+    right_in = box.left_in + box.width_in + 0.1
+    ax = place(figure, box._replace(left_in=right_in, width_in=0.12))
+    figure.colorbar(image, cax=ax, extend="both")
+    ax.set_ylabel(STRENGTH_LABEL, fontsize=TEXT_PT)
+    ax.tick_params(labelsize=TEXT_PT)
+
+
+def _head(figure: Figure, recording: Recording, settings: Settings, *, below: str) -> None:
+    """Write what the figure is of: name, date and station, then size and count."""
+    began = iso_time(recording.start_time)
+    parts = [
+        shown_name(PurePath(recording.path).name),
+        f"{began[:10]} {began[11:19]} UTC" if began else "date unknown",
+    ]
+    if settings.station.name:
+        parts.append(f"station {shown_name(settings.station.name, most=40)}")
+    size = f"{recording.duration_s:.1f} s at {recording.sample_rate_hz} Hz"
+    if recording.channels > 1:
+        size += f", channel {recording.channel} of {recording.channels}"
+    write_title(figure, "   ".join(parts), below=f"{size}; {below}")
+
+
+def _found(strokes: Strokes, shown: Sequence[Sequence[WhistlerRow]] = ()) -> str:
+    """Say how much was found, and whether all of it is enlarged."""
+    if not strokes:
+        return "no whistlers found"
+    traces = sum(len(rows) for rows in strokes.values())
+    text = f"{_counted(traces, 'trace')} of {_counted(len(strokes), 'stroke')}"
+    if 0 < len(shown) < len(strokes):
+        text += f", the {len(shown)} strongest enlarged"
+    return text
+
+
+def _counted(number: int, word: str) -> str:
+    return f"{number} {word}{'' if number == 1 else 's'}"
+
+
+def _time_line_page(measurement: Measurement) -> NotebookFigure:
+    """L and density against time, for recordings of which no spectrogram is kept."""
+    rows, recording = measurement.rows, measurement.recording
+    unit_s, unit = (HOUR_S, "h") if recording.duration_s > 2.0 * HOUR_S else (MINUTE_S, "min")
+    figure = new_sheet(TITLE_IN + 2.0 * (PANEL_IN + AXIS_IN) + KEY_IN)
+    _head(figure, recording, measurement.settings, below=_found(_strokes(rows)))
+    width_in = WIDTH_IN - LEFT_IN - RIGHT_IN
+    for number, (quantity, label) in enumerate(
+        (("l_value", "L"), ("equatorial_density_cm3", "equatorial density (cm⁻³)"))
+    ):
+        top_in = TITLE_IN + number * (PANEL_IN + AXIS_IN)
+        ax = place(figure, Box(LEFT_IN, top_in, width_in, PANEL_IN))
+        bars = draw_time_line(rows, ax, quantity=quantity, time_unit_s=unit_s)
+        if number == 1 and bars:
+            ax.set_yscale("log")
+        ax.set_xlim(0.0, recording.duration_s / unit_s)
+        label_axes(ax, f"time from the first sample ({unit})", label)
+        if number == 0 and bars:
+            ax.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=5, frameon=False)
+    left_out = sum(not math.isfinite(row.l_value) for row in rows)
+    more = f" {_counted(left_out, 'trace')} without L left out." if left_out else ""
+    write_sentence(figure, FOOTNOTE, from_bottom_in=0.3)
+    write_sentence(figure, f"Thick bar: ±; thin bar: both.{more} Too long for a spectrogram.")
+    return figure

@@ -15,7 +15,7 @@ from whistler.rows import WhistlerRow
 TEXT_PT = 8.0  # smallest text at saved size
 TITLE_PT = 10.0
 MAP = "Greys"  # noise white, signal black: prints as it shows, and lets coloured lines stand out
-STRENGTH_DB = (0.0, 24.0)  # power over noise from white to black
+STRENGTH_DB = (0.0, 18.0)  # power over noise from white to black
 NAME_LENGTH = 70
 STATUS_WORDS = {
     "undetermined": "undetermined",
@@ -82,13 +82,20 @@ def row_label(row: WhistlerRow) -> str:
         return f"{hops}: L and n {status}"
     if row.uncertainty_status != "ok":
         return f"{hops}: L {row.l_value:.2f}, n {row.equatorial_density_cm3:.3g} cm⁻³ {status}"
-    density_sd = row.equatorial_density_sd_cm3
-    decimals = 0 if density_sd >= 10.0 else 1
+    path = _with_sd(row.l_value, row.l_value_sd, least_decimals=3)
+    density = _with_sd(row.equatorial_density_cm3, row.equatorial_density_sd_cm3)
     return (
-        f"{hops}: L {row.l_value:.3f} ± {row.l_value_sd:.3f} (± {row.l_value_profile_sd:.2f}), "
-        f"n {row.equatorial_density_cm3:.{decimals}f} ± {density_sd:.{decimals}f} "
-        f"(± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³"
+        f"{hops}: L {path} (± {row.l_value_profile_sd:.2f}), "
+        f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³"
     )
+
+
+def _with_sd(value: float, sd: float, *, least_decimals: int = 0) -> str:
+    """Value and one-sigma to the decimals that show the first digit of the sigma."""
+    decimals = least_decimals
+    if math.isfinite(sd) and sd > 0.0:
+        decimals = max(least_decimals, -math.floor(math.log10(sd)))
+    return f"{value:.{decimals}f} ± {sd:.{decimals}f}"
 
 
 def stroke_heading(row: WhistlerRow) -> str:
