@@ -105,8 +105,11 @@ class CurveSearch:
         self._rows = np.zeros((len(self._plan.first_channel), frames), np.float32)
         self._best = np.full(frames, -1e9, np.float32)
         self._which = np.zeros(frames, np.int32)
+        self._level = np.zeros((len(self._rows), 1), np.float32)
         self._sum(0, frames)
-        self._scale = _range_scale(self._rows, self._plan, self._starts, self._ends)
+        self._level, variance = _row_noise(self._rows)
+        self._rows -= self._level
+        self._scale = _range_scale(variance, self._plan, self._starts, self._ends)
         self._maximise(0, frames)
 
     def _prepare(self, power: NDArray[np.float32], smooth: int) -> NDArray[np.float32]:
@@ -138,12 +141,18 @@ class CurveSearch:
             ends[min(int(np.searchsorted(edges, hz)), len(edges) - 1)] = 1
         return ends
 
-    def _sum(self, start: int, stop: int, excess: NDArray[np.float32] | None = None) -> None:
+    def _sum(self, start: int, stop: int) -> None:
         plan = self._plan
-        source = self._excess if excess is None else excess
         slope_sums(
-            source, plan.first_channel, plan.channel_count, plan.shift, self._rows, start, stop
+            self._excess,
+            plan.first_channel,
+            plan.channel_count,
+            plan.shift,
+            self._rows,
+            start,
+            stop,
         )
+        self._rows[:, start:stop] -= self._level
 
     def _maximise(self, start: int, stop: int) -> None:
         plan = self._plan
@@ -352,16 +361,21 @@ def _sub_band_edges(frequency_hz: NDArray[np.float64]) -> NDArray[np.int64]:
     return np.array(edges)
 
 
+def _row_noise(rows: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
+    """Level and variance of each row's noise, from its lower half: whistlers fill the upper one."""
+    sample = rows[:, :: max(1, rows.shape[1] // 1500)]
+    low, middle = np.percentile(sample, [15.87, 50.0], axis=1)
+    variance = np.maximum(middle - low, 1e-3) ** 2
+    return middle[:, None].astype(np.float32), np.asarray(variance, np.float64)
+
+
 def _range_scale(
-    rows: NDArray[np.float32],
+    variance: NDArray[np.float64],
     plan: _RowPlan,
     starts: NDArray[np.int64],
     ends: NDArray[np.int64],
 ) -> NDArray[np.float32]:
     """One over the noise sigma of each searched range of each template."""
-    sample = rows[:, :: max(1, rows.shape[1] // 1500)]
-    low, high = np.percentile(sample, [15.87, 84.13], axis=1)
-    variance = np.maximum(0.5 * (high - low), 1e-3) ** 2
     templates, bands = plan.row_index.shape
     scale = np.zeros((templates, len(starts), bands + 1), np.float32)
     by_band = np.where(np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0)

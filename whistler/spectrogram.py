@@ -8,10 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import fft
 
-from whistler.cleaning import LN2, CleanAudio
+from whistler.cleaning import CleanAudio
 
 WINDOW_S = 0.0213  # within 0.1 dB of chirp-matched cells for L 2.5-4 over 1-10 kHz
 HOP_S = 0.004
+NOISE_QUANTILE = 0.35
+QUANTILE_LEVEL = -float(np.log1p(-NOISE_QUANTILE))  # of exponential power of unit mean
 
 
 @dataclass(frozen=True)
@@ -61,9 +63,10 @@ def spectrogram(audio: CleanAudio, *, band_low_hz: float = 300.0) -> Spectrogram
 
     Notes
     -----
-    The noise of a channel is its median over the block, divided by ln 2 (the median of unit-mean
-    exponential power); each frame is then divided by its own median over the channels, which takes
-    out broadband residue: sferic tails, blanked samples, hiss that comes and goes.
+    The noise of a channel is a low quantile over the block, divided by that of unit-mean exponential
+    power; each frame is then divided by its own over the channels, which takes out broadband residue:
+    sferic tails, blanked samples, hiss that comes and goes. The quantile lies below the median, so
+    that crowded whistlers do not raise the noise they are measured against.
     """
     rate = audio.sample_rate_hz
     size = 2 * round(WINDOW_S * rate / 2)
@@ -102,8 +105,8 @@ def _normalise(power: NDArray[np.float32]) -> NDArray[np.float32]:
     if not alive.any():
         return np.ones_like(power)
     step = max(1, int(alive.sum()) // 8000)
-    channel = np.median(power[:, alive][:, ::step], axis=1) / LN2
+    channel = np.quantile(power[:, alive][:, ::step], NOISE_QUANTILE, axis=1) / QUANTILE_LEVEL
     power /= np.maximum(channel, channel.max() * 1e-6)[:, None].astype(np.float32)
-    frame = np.median(power, axis=0) / LN2
+    frame = np.quantile(power, NOISE_QUANTILE, axis=0) / QUANTILE_LEVEL
     power /= np.maximum(frame, 0.05).astype(np.float32)  # a fully blanked frame stays near zero
     return power

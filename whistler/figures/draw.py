@@ -14,7 +14,6 @@ from whistler.figures.style import (
     STRENGTH_DB,
     TEXT_PT,
     PathStyle,
-    halo,
     path_style,
     row_label,
 )
@@ -110,10 +109,10 @@ def draw_trace(row: WhistlerRow, ax: Axes, *, style: PathStyle) -> Line2D:
         row.trace.frequency_hz / 1e3,
         linestyle="none",
         marker=style.marker,
-        markersize=3.8,
+        markersize=4.4,
         color=style.colour,
         markeredgecolor="white",
-        markeredgewidth=0.4,
+        markeredgewidth=0.5,
         label=row_label(row),
         zorder=4,
     )
@@ -162,12 +161,11 @@ def draw_curve(
             curve_times(row, frequency_hz, model=model),
             frequency_hz / 1e3,
             color=style.colour,
-            linewidth=CURVE_PT,  # no rim here: the whistler must show on both sides of its fit
+            linewidth=CURVE_PT,  # thin and without a rim: the whistler must show on both sides
             zorder=3,
         )
         if (low_hz, high_hz) != inner:
             line.set_dashes(style.dashes)
-            line.set_path_effects(halo(CURVE_PT))
         lines.append(line)
     return lines
 
@@ -232,7 +230,6 @@ def draw_sferic(row: WhistlerRow, ax: Axes) -> list[Line2D]:
         zorder=6,
     )
     guide = ax.axvline(row.sferic_time_s, color="black", linewidth=0.8, linestyle=":", zorder=2)
-    guide.set_path_effects(halo(0.8))
     artists = [mark, guide]
     if not row.sferic_seen and math.isfinite(row.sferic_time_sd_s):
         ends = row.sferic_time_s + row.sferic_time_sd_s * np.array([-1.0, 1.0])

@@ -12,7 +12,6 @@ from matplotlib.lines import Line2D
 from whistler.cleaning import clean
 from whistler.clock import iso_time
 from whistler.figures.draw import (
-    STRENGTH_LABEL,
     draw_curve,
     draw_nose,
     draw_residual_panel,
@@ -39,9 +38,16 @@ from whistler.figures.sheet import (
     write_sentence,
     write_title,
 )
+from whistler.figures.strip import (
+    STRIP_WIDTH_IN,
+    begin_s,
+    draw_overview,
+    draw_scale,
+    draw_views,
+    strokes_of,
+)
 from whistler.figures.style import (
     TEXT_PT,
-    PathStyle,
     path_style,
     row_label,
     shown_name,
@@ -54,7 +60,6 @@ from whistler.spectrogram import spectrogram
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
-    from matplotlib.image import AxesImage
 
     from whistler.measure import Measurement
     from whistler.recording import Recording
@@ -70,18 +75,14 @@ MINUTE_S = 60.0
 HOUR_S = 3600.0
 STRIP_IN = 1.5
 PANEL_IN = 2.2
-SCALE_IN = 0.75  # right of the strip, for the grey scale
 RESIDUALS_IN = 1.3
 BETWEEN_IN = 0.12
 GAP_IN = 0.75  # between columns, for the labels of the right one
 LINE_IN = 0.165
-CHARACTER_IN = 0.08  # of the numbers above the strip
 FOOTNOTE = (
     "L: path. n: equatorial electron density. ±: one-sigma given the model; "
     "(±): from not knowing density profile, ionosphere and place of the stroke."
 )
-
-Strokes = dict[int, list["WhistlerRow"]]
 
 
 def save_recording_figure(measurement: Measurement, path: Path) -> None:
@@ -116,7 +117,7 @@ def plot_recording(measurement: Measurement) -> NotebookFigure:
     NotebookFigure
         A matplotlib figure.
     """
-    strokes = _strokes(measurement.rows)
+    strokes = strokes_of(measurement.rows)
     if strokes and not measurement.views:
         return _time_line_page(measurement)
     shown = _strongest(strokes)
@@ -127,11 +128,12 @@ def plot_recording(measurement: Measurement) -> NotebookFigure:
     ]
     strip_in = STRIP_IN if shown else 2.0 * STRIP_IN
     top_in = TITLE_IN + strip_in + AXIS_IN
-    figure = new_sheet(top_in + sum(heads) + len(heads) * (PANEL_IN + AXIS_IN) + KEY_IN)
+    foot_in = KEY_IN if shown else 0.35
+    figure = new_sheet(top_in + sum(heads) + len(heads) * (PANEL_IN + AXIS_IN) + foot_in)
     _head(figure, measurement.recording, measurement.settings, below=_found(strokes, shown))
     if measurement.views:
-        box = Box(LEFT_IN, TITLE_IN, WIDTH_IN - LEFT_IN - SCALE_IN, strip_in)
-        _write_scale(figure, draw_overview(measurement, place(figure, box)), box)
+        box = Box(LEFT_IN, TITLE_IN, STRIP_WIDTH_IN, strip_in)
+        draw_scale(figure, draw_overview(measurement, place(figure, box)), box=box)
     width_in = (WIDTH_IN - LEFT_IN - RIGHT_IN - (columns - 1) * GAP_IN) / columns
     for number, rows in enumerate(shown):
         line, column = divmod(number, columns)
@@ -162,7 +164,7 @@ def plot_stroke(measurement: Measurement, group: int) -> NotebookFigure:
     ValueError
         When there is no such stroke.
     """
-    strokes = _strokes(measurement.rows)
+    strokes = strokes_of(measurement.rows)
     if group not in strokes:
         known = ", ".join(map(str, strokes)) or "none"
         raise ValueError(f"group={group} is not among the strokes found ({known}); choose another")
@@ -189,101 +191,15 @@ def plot_spectrogram(recording: Recording, settings: Settings | None = None) -> 
     settings = settings or Settings()
     height_in = 2.0 * STRIP_IN
     figure = new_sheet(TITLE_IN + height_in + AXIS_IN)
-    box = Box(LEFT_IN, TITLE_IN, WIDTH_IN - LEFT_IN - SCALE_IN, height_in)
-    image = _draw_views(_views(recording, settings), place(figure, box), recording.duration_s)
-    _write_scale(figure, image, box)
+    box = Box(LEFT_IN, TITLE_IN, STRIP_WIDTH_IN, height_in)
+    views = _views(recording, settings)
+    image = draw_views(views, place(figure, box), duration_s=recording.duration_s)
+    draw_scale(figure, image, box=box)
     _head(figure, recording, settings, below="before the search")
     return figure
 
 
-def draw_overview(measurement: Measurement, ax: Axes) -> AxesImage:
-    """Return the image of a whole recording, its traces drawn and its strokes numbered above.
-
-    Parameters
-    ----------
-    measurement : Measurement
-        At least one view.
-    ax : matplotlib.axes.Axes
-        Where to draw.
-    """
-    duration_s = measurement.recording.duration_s
-    image = _draw_views(measurement.views, ax, duration_s)
-    strokes = _strokes(measurement.rows)
-    for rows in strokes.values():
-        draw_sferic(rows[0], ax)
-        for number, row in enumerate(rows):
-            _mark_top(row, ax, path_style(number))
-    per_inch_s = duration_s / (WIDTH_IN - LEFT_IN - SCALE_IN)
-    starts = {group: _begin_s(rows) for group, rows in strokes.items()}
-    for at_s, text in stroke_labels(starts, character_s=CHARACTER_IN * per_inch_s):
-        ax.text(
-            at_s,
-            1.04,
-            text,
-            transform=ax.get_xaxis_transform(),
-            ha="center",
-            va="bottom",
-            fontsize=TEXT_PT,
-        )
-    return image
-
-
-def _mark_top(row: WhistlerRow, ax: Axes, style: PathStyle) -> None:
-    """Mark a trace at its upper end only: the strip is for seeing what was found and missed."""
-    if len(row.trace.time_s):
-        top = int(row.trace.frequency_hz.argmax())
-        ax.plot(
-            row.trace.time_s[top],
-            row.trace.frequency_hz[top] / 1e3,
-            color=style.colour,
-            marker=style.marker,
-            markersize=5.0,
-            markeredgecolor="white",
-            markeredgewidth=0.6,
-        )
-
-
-def stroke_labels(times_s: dict[int, float], *, character_s: float) -> list[tuple[float, str]]:
-    """Return places and texts that number strokes, crowded ones under one label.
-
-    Parameters
-    ----------
-    times_s : dict of int to float
-        Time of each stroke by its number.
-    character_s : float
-        Width of a character on the time axis.
-
-    Examples
-    --------
-    >>> stroke_labels({1: 2.0, 2: 10.0, 3: 10.1, 4: 10.3}, character_s=0.2)
-    [(2.0, '1'), (10.15, '2–4')]
-    """
-    crowds = [[(time_s, group)] for group, time_s in sorted(times_s.items(), key=lambda x: x[1])]
-    k = 0
-    while k + 1 < len(crowds):
-        (left_s, left), (right_s, right) = _crowd_label(crowds[k]), _crowd_label(crowds[k + 1])
-        if right_s - left_s < 0.5 * character_s * (len(left) + len(right) + 2):
-            crowds[k : k + 2] = [crowds[k] + crowds[k + 1]]
-            k = max(k - 1, 0)  # the wider label may now reach back
-        else:
-            k += 1
-    return [_crowd_label(crowd) for crowd in crowds]
-
-
-def _crowd_label(crowd: Sequence[tuple[float, int]]) -> tuple[float, str]:
-    groups = [group for _, group in crowd]
-    text = f"{min(groups)}–{max(groups)}" if len(groups) > 1 else str(groups[0])
-    return 0.5 * (crowd[0][0] + crowd[-1][0]), text
-
-
-def _strokes(rows: Iterable[WhistlerRow]) -> Strokes:
-    strokes: Strokes = {}
-    for row in rows:
-        strokes.setdefault(row.group, []).append(row)
-    return strokes
-
-
-def _strongest(strokes: Strokes) -> list[list[WhistlerRow]]:
+def _strongest(strokes: dict[int, list[WhistlerRow]]) -> list[list[WhistlerRow]]:
     """Rows of the strokes to enlarge, in the order of the catalogue."""
 
     def strength_db(group: int) -> float:
@@ -293,21 +209,15 @@ def _strongest(strokes: Strokes) -> list[list[WhistlerRow]]:
     return [rows for group, rows in strokes.items() if group in chosen]
 
 
-def _begin_s(rows: Sequence[WhistlerRow]) -> float:
-    """When a stroke happened, or else when its first trace begins."""
-    known = [row.sferic_time_s for row in rows if math.isfinite(row.sferic_time_s)]
-    return min(known or [float(row.trace.time_s.min()) for row in rows if len(row.trace.time_s)])
-
-
 def _window_s(rows: Sequence[WhistlerRow]) -> tuple[float, float]:
     """The stretch of time that shows a stroke and all its traces."""
     ends = [float(row.trace.time_s.max()) for row in rows if len(row.trace.time_s)]
-    begin_s = _begin_s(rows)
-    end_s = max([*ends, begin_s + LEAD_S])
+    first_s = begin_s(rows)
     sd_s = rows[0].sferic_time_sd_s
     if not rows[0].sferic_seen and math.isfinite(sd_s):
-        begin_s -= sd_s
-    return begin_s - LEAD_S, end_s + TAIL * (end_s - begin_s)
+        first_s -= sd_s
+    last_s = max([*ends, first_s + LEAD_S])
+    return first_s - LEAD_S, last_s + TAIL * (last_s - first_s)
 
 
 def _head_in(rows: int) -> float:
@@ -382,23 +292,6 @@ def _views(recording: Recording, settings: Settings) -> Iterable[Spectrogram]:
         yield spectrogram(audio, band_low_hz=settings.band_low_hz)
 
 
-def _draw_views(views: Iterable[Spectrogram], ax: Axes, duration_s: float) -> AxesImage:
-    image, *others = (draw_spectrogram(view, ax) for view in views)
-    bottom = min(item.get_extent()[2] for item in (image, *others))
-    top = max(item.get_extent()[3] for item in (image, *others))
-    ax.set(xlim=(0.0, duration_s), ylim=(bottom, top))
-    return image
-
-
-def _write_scale(figure: Figure, image: AxesImage, box: Box) -> None:
-    """Draw the grey scale right of a spectrogram."""
-    right_in = box.left_in + box.width_in + 0.1
-    ax = place(figure, box._replace(left_in=right_in, width_in=0.12))
-    figure.colorbar(image, cax=ax, extend="both")
-    ax.set_ylabel(STRENGTH_LABEL, fontsize=TEXT_PT)
-    ax.tick_params(labelsize=TEXT_PT)
-
-
 def _head(figure: Figure, recording: Recording, settings: Settings, *, below: str) -> None:
     """Write what the figure is of: name, date and station, then size and count."""
     began = iso_time(recording.start_time)
@@ -414,7 +307,9 @@ def _head(figure: Figure, recording: Recording, settings: Settings, *, below: st
     write_title(figure, "   ".join(parts), below=f"{size}; {below}")
 
 
-def _found(strokes: Strokes, shown: Sequence[Sequence[WhistlerRow]] = ()) -> str:
+def _found(
+    strokes: dict[int, list[WhistlerRow]], shown: Sequence[Sequence[WhistlerRow]] = ()
+) -> str:
     """Say how much was found, and whether all of it is enlarged."""
     if not strokes:
         return "no whistlers found"
@@ -434,7 +329,7 @@ def _time_line_page(measurement: Measurement) -> NotebookFigure:
     rows, recording = measurement.rows, measurement.recording
     unit_s, unit = (HOUR_S, "h") if recording.duration_s > 2.0 * HOUR_S else (MINUTE_S, "min")
     figure = new_sheet(TITLE_IN + 2.0 * (PANEL_IN + AXIS_IN) + KEY_IN)
-    _head(figure, recording, measurement.settings, below=_found(_strokes(rows)))
+    _head(figure, recording, measurement.settings, below=_found(strokes_of(rows)))
     width_in = WIDTH_IN - LEFT_IN - RIGHT_IN
     for number, (quantity, label) in enumerate(
         (("l_value", "L"), ("equatorial_density_cm3", "equatorial density (cm⁻³)"))

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 from matplotlib.font_manager import FontProperties, findfont, get_font
-from matplotlib.patheffects import AbstractPathEffect, Normal, Stroke
 
 from whistler.errors import printable
 from whistler.rows import WhistlerRow
@@ -22,9 +21,9 @@ STATUS_WORDS = {
     "at-bound": "not determined (fit at a bound)",
     "prior-dominated": "from the density prior, no sigma",
 }
-# Okabe and Ito's colours without the yellow, which white paper swallows; neighbours in the list
-# differ in lightness too. The two cycles have no common factor, so 56 paths differ.
-_COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
+# Okabe and Ito's colours without the yellow, which white paper swallows, in an order that changes
+# lightness from each to the next. Cycles of 7 and 8 have no common factor, so 56 paths differ.
+_COLOURS = ("#0072B2", "#E69F00", "#D55E00", "#56B4E9", "#009E73", "#CC79A7", "#000000")
 _MARKERS = ("o", "s", "^", "D", "P", "<", "X", ">")
 _DASHES = ((4.0, 2.0), (1.5, 1.5), (6.0, 1.5, 1.5, 1.5))
 
@@ -59,11 +58,6 @@ def path_style(number: int) -> PathStyle:
         _MARKERS[number % len(_MARKERS)],
         _DASHES[number % len(_DASHES)],
     )
-
-
-def halo(line_width_pt: float) -> list[AbstractPathEffect]:
-    """Return a white rim for a line of this width, so that it shows on black too."""
-    return [Stroke(linewidth=line_width_pt + 1.6, foreground="white"), Normal()]
 
 
 def row_label(row: WhistlerRow) -> str:
