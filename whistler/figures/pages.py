@@ -8,6 +8,7 @@ from pathlib import Path, PurePath
 from typing import TYPE_CHECKING
 
 from matplotlib.lines import Line2D
+from matplotlib.ticker import LogLocator, NullFormatter, StrMethodFormatter
 
 from whistler.cleaning import clean
 from whistler.clock import iso_time
@@ -126,7 +127,7 @@ def plot_recording(measurement: Measurement) -> NotebookFigure:
         _head_in(max(map(len, shown[first : first + columns])))
         for first in range(0, len(shown), columns)
     ]
-    strip_in = STRIP_IN if shown else 2.0 * STRIP_IN
+    strip_in = (STRIP_IN if shown else 2.0 * STRIP_IN) if measurement.views else 0.0
     top_in = TITLE_IN + strip_in + AXIS_IN
     foot_in = KEY_IN if shown else 0.35
     figure = new_sheet(top_in + sum(heads) + len(heads) * (PANEL_IN + AXIS_IN) + foot_in)
@@ -338,13 +339,27 @@ def _time_line_page(measurement: Measurement) -> NotebookFigure:
         ax = place(figure, Box(LEFT_IN, top_in, width_in, PANEL_IN))
         bars = draw_time_line(rows, ax, quantity=quantity, time_unit_s=unit_s)
         if number == 1 and bars:
-            ax.set_yscale("log")
+            _logarithmic(ax)
         ax.set_xlim(0.0, recording.duration_s / unit_s)
         label_axes(ax, f"time from the first sample ({unit})", label)
         if number == 0 and bars:
-            ax.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=5, frameon=False)
+            ax.legend(
+                loc="lower right",
+                bbox_to_anchor=(1.0, 1.0),
+                ncols=8,
+                frameon=False,
+                fontsize=TEXT_PT,
+            )
     left_out = sum(not math.isfinite(row.l_value) for row in rows)
     more = f" {_counted(left_out, 'trace')} without L left out." if left_out else ""
     write_sentence(figure, FOOTNOTE, from_bottom_in=0.3)
     write_sentence(figure, f"Thick bar: ±; thin bar: both.{more} Too long for a spectrogram.")
     return figure
+
+
+def _logarithmic(ax: Axes) -> None:
+    """Make the upright axis logarithmic, with plain numbers at 1, 2 and 5."""
+    ax.set_yscale("log")
+    ax.yaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
+    ax.yaxis.set_major_formatter(StrMethodFormatter("{x:g}"))
+    ax.yaxis.set_minor_formatter(NullFormatter())

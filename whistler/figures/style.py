@@ -19,7 +19,7 @@ NAME_LENGTH = 70
 STATUS_WORDS = {
     "undetermined": "undetermined",
     "at-bound": "not determined (fit at a bound)",
-    "prior-dominated": "from the density prior, no sigma",
+    "prior-dominated": "led by the prior",
 }
 # Okabe and Ito's colours without the yellow, which white paper swallows, in an order that changes
 # lightness from each to the next. Cycles of 7 and 8 have no common factor, so 56 paths differ.
@@ -75,7 +75,7 @@ def row_label(row: WhistlerRow) -> str:
     if not math.isfinite(row.l_value):
         return f"{hops}: L and n {status}"
     if row.uncertainty_status != "ok":
-        return f"{hops}: L {row.l_value:.2f}, n {row.equatorial_density_cm3:.3g} cm⁻³ {status}"
+        return f"{hops}: L {row.l_value:.2f}, n {row.equatorial_density_cm3:.0f} cm⁻³, {status}"
     path = _with_sd(row.l_value, row.l_value_sd, least_decimals=3)
     density = _with_sd(row.equatorial_density_cm3, row.equatorial_density_sd_cm3)
     return (
