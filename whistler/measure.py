@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import html
+import json
+import os
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import lru_cache
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -12,16 +16,19 @@ from fieldlines import FieldLineModel
 from whistler.cleaning import CleanAudio, clean
 from whistler.clock import decimal_year, iso_time
 from whistler.discovery import Banks, Detection, find_traces
-from whistler.errors import Notice
+from whistler.errors import Notice, printable
 from whistler.fit import Ties
 from whistler.group import FoundTrace, group_strokes
 from whistler.model import field_line_model
-from whistler.recording import AudioBlock, Recording
+from whistler.recording import AudioBlock, Recording, open_recording
 from whistler.results import Sighting, stroke_rows
-from whistler.rows import WhistlerRow
+from whistler.rows import COLUMNS, WhistlerRow
 from whistler.settings import Settings
 from whistler.sferic import SfericCatalogue
 from whistler.spectrogram import Spectrogram, spectrogram
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 BLOCK_S = 160.0
 OVERLAP_S = 20.0  # a five-hop whistler with its sferic is whole in one block or the next
@@ -60,6 +67,74 @@ class Measurement:
     sferics: SfericCatalogue
     model: FieldLineModel
 
+    # The methods below are for notebooks. What they need from modules that stand above this one
+    # they ask of the package by its public names, and only when called.
+
+    def to_pandas(self) -> Any:
+        """Return the rows as a pandas table with the catalogue's columns; NaN is undetermined.
+
+        Raises
+        ------
+        ImportError
+            When pandas is not installed.
+        """
+        try:
+            import pandas  # type: ignore[import-untyped]  # it comes without types
+        except ImportError as error:
+            extra = "python -m pip install 'whistler-analyser[notebook]'"
+            raise ImportError(f"to_pandas needs pandas; install it with {extra}") from error
+        names = [column.name for column in COLUMNS]
+        table = pandas.DataFrame({name: [getattr(r, name) for r in self.rows] for name in names})
+        table["time"] = pandas.to_datetime(table["time"], utc=True, format="ISO8601")
+        table["flags"] = [" ".join(row.flags) for row in self.rows]
+        return table
+
+    def to_json(self) -> str:
+        """Return the document that ``whistler measure --json`` prints."""
+        from whistler import measurement_document
+
+        document = measurement_document([self], self.settings)
+        return json.dumps(document, allow_nan=False, indent=1)
+
+    def plot(self, group: int | None = None) -> Figure:
+        """Return the figure of the recording, or of the stroke with this number.
+
+        Raises
+        ------
+        ValueError
+            When there is no such stroke.
+        """
+        from whistler import plot_recording, plot_stroke
+
+        return plot_recording(self) if group is None else plot_stroke(self, group)
+
+    def _repr_html_(self) -> str:
+        """Return the rows as a table for notebooks."""
+        head = "".join(f"<th>{title}</th>" for title in _HTML_HEAD)
+        body = "".join(f"<tr>{_html_cells(row)}</tr>" for row in self.rows)
+        name = html.escape(printable(os.path.basename(self.recording.path)))  # noqa: PTH119  any text
+        began = iso_time(self.recording.start_time) or "start unknown"
+        caption = f"{name}, {began}, {self.recording.duration_s:.1f} s: {len(self.rows)} traces"
+        return f"<table><caption>{caption}</caption><tr>{head}</tr>{body}</table>"
+
+
+_HTML_HEAD = ("stroke", "sferic, s", "hops", "L", "n, cm⁻³", "SNR, dB", "σ", "flags")
+
+
+def _html_cells(row: WhistlerRow) -> str:
+    cells = (
+        str(row.group),
+        f"{row.sferic_time_s:.3f}{'' if row.sferic_seen else ' (predicted)'}",
+        str(row.hops),
+        f"{row.l_value:.3f} ± {row.l_value_sd:.3f} (± {row.l_value_profile_sd:.2f})",
+        f"{row.equatorial_density_cm3:.0f} ± {row.equatorial_density_sd_cm3:.1f} "
+        f"(± {row.equatorial_density_profile_sd_cm3:.0f})",
+        f"{row.snr_db:.0f}",
+        row.uncertainty_status,
+        " ".join(row.flags),
+    )
+    return "".join(f"<td>{html.escape(cell.replace('nan', '–'))}</td>" for cell in cells)
+
 
 @dataclass(frozen=True)
 class _BlockResult:
@@ -69,16 +144,19 @@ class _BlockResult:
 
 
 def measure_recording(
-    recording: Recording, settings: Settings, *, progress: Progress | None = None
+    recording: Recording | str | os.PathLike[str],
+    settings: Settings | None = None,
+    *,
+    progress: Progress | None = None,
 ) -> Measurement:
     """Return every whistler of a recording with L, density and their error bars.
 
     Parameters
     ----------
-    recording : Recording
-        Opened recording.
-    settings : Settings
-        What to measure with.
+    recording : Recording, str or path-like
+        Opened recording, or a file to open with the settings' station and channel.
+    settings : Settings, optional
+        What to measure with; the defaults if left out.
     progress : callable, optional
         Called with the share done, 0 to 1.
 
@@ -87,6 +165,9 @@ def measure_recording(
     Measurement
         Rows, and what a figure of them needs.
     """
+    settings = settings or Settings()
+    if not isinstance(recording, Recording):
+        recording = open_recording(recording, station=settings.station, channel=settings.channel)
     model = field_line_model(settings, decimal_year=decimal_year(recording.start_time))
     banks = _banks(_bank_model(recording, settings), settings)
     results = []
