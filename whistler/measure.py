@@ -126,7 +126,7 @@ def _html_cells(row: WhistlerRow) -> str:
         str(row.group),
         f"{row.sferic_time_s:.3f}{'' if row.sferic_seen else ' (predicted)'}",
         str(row.hops),
-        f"{row.l_value:.3f} ± {row.l_value_sd:.3f} (± {row.l_value_profile_sd:.2f})",
+        f"{row.l_value:.3f} ± {row.l_value_sd:.1g} (± {row.l_value_profile_sd:.2f})",
         f"{row.equatorial_density_cm3:.0f} ± {row.equatorial_density_sd_cm3:.1f} "
         f"(± {row.equatorial_density_profile_sd_cm3:.0f})",
         f"{row.snr_db:.0f}",
