@@ -34,6 +34,7 @@ FIELDLINES_ORDER = [
 ]
 WHISTLER_ORDER = [
     "errors",
+    "stopping",
     "station",
     "settings",
     "model",

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from whistler.broadcastwave import BroadcastTime, read_broadcast_time
 from whistler.errors import Notice, RecordingError
 from whistler.riff import ByteWindow, RiffLayout, read_layout
+from whistler.stopping import undisturbed
 
 LOWEST_RATE_HZ, HIGHEST_RATE_HZ = 8_000, 200_000
 MAX_CHANNELS = 64
@@ -168,7 +169,8 @@ class AudioFile:
     def _open_decoder(self) -> soundfile.SoundFile:
         self._window.seek(0)
         try:
-            return soundfile.SoundFile(self._window)
+            with undisturbed():
+                return soundfile.SoundFile(self._window)
         except (soundfile.LibsndfileError, TypeError, ValueError) as error:
             reason = f"{self.container} header, but not decodable ({_plain(error)})"
             raise _refusal("E103", self.path, reason) from error
@@ -192,7 +194,10 @@ class AudioFile:
     def _read(self, frames: int) -> NDArray[np.float32] | None:
         """Return the next frames, an empty array at the end, None on damage."""
         try:
-            data: NDArray[np.float32] = self._sound.read(frames, dtype="float32", always_2d=True)
+            with undisturbed():
+                data: NDArray[np.float32] = self._sound.read(
+                    frames, dtype="float32", always_2d=True
+                )
         except (soundfile.LibsndfileError, RuntimeError):
             return None
         return data
@@ -202,7 +207,8 @@ class AudioFile:
         self._sound.close()
         self._sound = self._open_decoder()
         try:
-            return bool(self._sound.seek(position) == position)
+            with undisturbed():
+                return bool(self._sound.seek(position) == position)
         except (soundfile.LibsndfileError, RuntimeError):
             return False
 

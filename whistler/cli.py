@@ -3,11 +3,9 @@
 from __future__ import annotations
 
 import errno
-import signal
 import sys
 import traceback
 import warnings
-from types import FrameType
 from typing import Annotated
 
 import typer
@@ -20,9 +18,9 @@ from whistler.commands.night import night
 from whistler.commands.predict import predict
 from whistler.commands.synthesize import synthesize
 from whistler.errors import Notice, Stopped, WhistlerError
+from whistler.stopping import listen
 
 CANNOT_WRITE = 74
-SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 USAGE_ERROR = typer.BadParameter.__mro__[1]  # the class of every parsing error, vendored or not
 
 app = typer.Typer(
@@ -57,8 +55,7 @@ for command in (measure, night, fit, predict, synthesize):
 
 def main() -> None:
     """Run the command line of this process and exit with the code of the contract."""
-    for number in SIGNALS:
-        signal.signal(number, _stop)
+    listen()
     common.speak_any_alphabet()
     sys.exit(run(sys.argv[1:]))
 
@@ -125,8 +122,3 @@ def _usage_notice(error: Exception) -> Notice:
     shown = getattr(error, "format_message", lambda: str(error))()
     reason = " ".join(str(shown).split()).rstrip(".") or "no command given"
     return Notice("E605", command, reason, f"see '{command} --help'")
-
-
-def _stop(number: int, frame: FrameType | None) -> None:
-    signal.signal(number, signal.SIG_DFL)  # a second one ends it at once
-    raise Stopped(number)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import re
+import signal
 import struct
 import subprocess
 import sys
@@ -18,10 +19,11 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from shell_helpers import RATE_HZ, noise, write
 
+from whistler import stopping
 from whistler.audiofile import AudioFile
-from whistler.errors import RecordingError
+from whistler.errors import RecordingError, Stopped
 from whistler.recording import Recording, open_recording
-from whistler.riff import read_layout
+from whistler.riff import ByteWindow, read_layout
 
 
 def codes(recording: Recording) -> set[str]:
@@ -385,6 +387,32 @@ def test_odd_names_are_only_names(tmp_path: Path, wav: Path, name: bytes) -> Non
     recording = open_recording(os.fsdecode(path))
     assert recording.frame_count == 2 * RATE_HZ
     assert "\n" not in "".join(map(str, recording.notices))
+
+
+def test_a_stop_while_the_decoder_reads_is_not_lost(
+    wav: Path, monkeypatch: pytest.MonkeyPatch, capfd: pytest.CaptureFixture[str]
+) -> None:
+    """A signal that comes in the middle of the decoder's own call stops the work right after."""
+    handlers = {number: signal.getsignal(number) for number in stopping.SIGNALS}
+    stopping.listen()
+    readinto = ByteWindow.readinto
+    signals = iter([signal.SIGTERM])  # one: a second would end the process
+
+    def interrupted(window: ByteWindow, buffer: bytearray) -> int:
+        if window.tell() > 1000 and next(signals, None):
+            os.kill(os.getpid(), signal.SIGTERM)
+            time.sleep(0.01)
+        return readinto(window, buffer)
+
+    monkeypatch.setattr(ByteWindow, "readinto", interrupted)
+    try:
+        with pytest.raises(Stopped) as stop:
+            open_recording(wav)
+        assert stop.value.signal_number == signal.SIGTERM
+    finally:
+        for number, handler in handlers.items():
+            signal.signal(number, handler)
+    assert capfd.readouterr().err == ""
 
 
 WAV_BYTES = bytes.fromhex(
