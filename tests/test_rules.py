@@ -38,6 +38,7 @@ WHISTLER_ORDER = [
     "station",
     "settings",
     "model",
+    "containers",
     "riff",
     "broadcastwave",
     "clock",
@@ -123,7 +124,7 @@ def where(path: Path, node: ast.AST) -> str:
 
 
 def tree_of(path: Path) -> ast.Module:
-    return ast.parse(path.read_text(encoding="utf-8"))
+    return ast.parse(path.read_text(encoding="utf-8"), filename=str(path))
 
 
 PACKAGE_MODULES = [*modules("fieldlines"), *modules("whistler")]

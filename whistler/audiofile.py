@@ -5,19 +5,24 @@ from __future__ import annotations
 import errno
 import os
 import stat
+import tempfile
 from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
 from pathlib import PurePath
 from types import TracebackType
+from typing import BinaryIO
 
 import numpy as np
 import soundfile
 from numpy.typing import NDArray
 
 from whistler.broadcastwave import BroadcastTime, read_broadcast_time
+from whistler.containers import ENDINGS, container_of, cut_short
 from whistler.errors import Notice, RecordingError
 from whistler.riff import ByteWindow, RiffLayout, read_layout
 from whistler.stopping import undisturbed
 
+STANDARD_ERROR = 2
 LOWEST_RATE_HZ, HIGHEST_RATE_HZ = 8_000, 200_000
 MAX_CHANNELS = 64
 PIECE_FRAMES = 2**16
@@ -25,30 +30,6 @@ PROBE_FRAMES = 256  # read to see whether audio can be decoded again
 FIRST_STEP_FRAMES = 1_024
 LONGEST_STEP_FRAMES = 2**26
 UNKNOWN_FRAMES = 2**60  # larger totals in a header mean that nobody knows
-
-MAGICS = (
-    ("WAV", 0, b"RIFF"),
-    ("WAV", 0, b"RIFX"),
-    ("WAV", 0, b"RF64"),
-    ("WAV", 0, b"BW64"),
-    ("FLAC", 0, b"fLaC"),
-    ("OGG", 0, b"OggS"),
-    ("AIFF", 0, b"FORM"),
-    ("W64", 0, b"riff"),
-    ("CAF", 0, b"caff"),
-    ("AU", 0, b".snd"),
-    ("MP3", 0, b"ID3"),
-)
-ENDINGS = {
-    "WAV": (".wav", ".wave", ".bwf", ".rf64", ".bw64"),
-    "FLAC": (".flac",),
-    "OGG": (".ogg", ".oga", ".opus"),
-    "AIFF": (".aif", ".aiff", ".aifc"),
-    "W64": (".w64",),
-    "CAF": (".caf",),
-    "AU": (".au", ".snd"),
-    "MP3": (".mp3",),
-}
 
 
 class AudioFile:
@@ -86,15 +67,17 @@ class AudioFile:
         self.lost_frames: list[tuple[int, int]] = []
         self.broadcast: BroadcastTime | None = None
         self._layout: RiffLayout | None = None
-        self.descriptor, self.size = _open_regular(path)
-        try:
+        self._complaints: BinaryIO | None = None
+        with ExitStack() as held:
+            self.descriptor, self.size = _open_regular(path)
+            held.callback(os.close, self.descriptor)
             self.container = _container(path, self.descriptor)
+            if self.container == "MP3":  # whose decoder writes about damage to standard error
+                self._complaints = held.enter_context(tempfile.TemporaryFile())
             self._window = self._audio_bytes()
             self._sound = self._open_decoder()
             self._check_header()
-        except BaseException:
-            os.close(self.descriptor)
-            raise
+            self._held = held.pop_all()
 
     def __enter__(self) -> AudioFile:
         """Return the file itself."""
@@ -107,8 +90,9 @@ class AudioFile:
         trace: TracebackType | None,
     ) -> None:
         """Close the file."""
-        self._sound.close()
-        os.close(self.descriptor)
+        with self._decoder():
+            self._sound.close()
+        self._held.close()
 
     def pieces(self) -> Iterator[NDArray[np.float32]]:
         """Yield the audio in order, each piece (frames, channels); lost frames come as zeros.
@@ -148,8 +132,22 @@ class AudioFile:
             return frames * layout.declared_size // layout.data_size
         return frames if 0 < frames < UNKNOWN_FRAMES else None
 
+    @contextmanager
+    def _decoder(self) -> Iterator[None]:
+        """Call the decoder; no signal's exception is lost in its C code, and it stays silent."""
+        with undisturbed(), ExitStack() as restored:
+            if self._complaints is not None:
+                kept = os.dup(STANDARD_ERROR)
+                restored.callback(os.close, kept)
+                restored.callback(os.dup2, kept, STANDARD_ERROR)
+                os.dup2(self._complaints.fileno(), STANDARD_ERROR)
+            yield
+
     def _audio_bytes(self) -> ByteWindow:
         if self.container != "WAV":
+            cut = cut_short(self.descriptor, self.container, size=self.size)
+            if cut is not None:
+                self.notices.append(Notice("W104", self.path, cut, "measured what is there"))
             return ByteWindow(self.descriptor, header=b"", offset=0, size=self.size)
         try:
             layout = read_layout(self.descriptor, self.size)
@@ -169,7 +167,7 @@ class AudioFile:
     def _open_decoder(self) -> soundfile.SoundFile:
         self._window.seek(0)
         try:
-            with undisturbed():
+            with self._decoder():
                 return soundfile.SoundFile(self._window)
         except (soundfile.LibsndfileError, TypeError, ValueError) as error:
             reason = f"{self.container} header, but not decodable ({_plain(error)})"
@@ -194,7 +192,7 @@ class AudioFile:
     def _read(self, frames: int) -> NDArray[np.float32] | None:
         """Return the next frames, an empty array at the end, None on damage."""
         try:
-            with undisturbed():
+            with self._decoder():
                 data: NDArray[np.float32] = self._sound.read(
                     frames, dtype="float32", always_2d=True
                 )
@@ -207,7 +205,7 @@ class AudioFile:
         self._sound.close()
         self._sound = self._open_decoder()
         try:
-            with undisturbed():
+            with self._decoder():
                 return bool(self._sound.seek(position) == position)
         except (soundfile.LibsndfileError, RuntimeError):
             return False
@@ -235,6 +233,10 @@ class AudioFile:
                 f"truncated: {declared / rate:.2f} s announced, {delivered / rate:.2f} s present"
             )
             self.notices.append(Notice("W104", self.path, reason, "measured what is there"))
+        if self._complaints is not None and os.fstat(self._complaints.fileno()).st_size:
+            reason = "the decoder met damage, whose place and length it does not tell"
+            consequence = "measured what it gave; times after the damage may be off"
+            self.notices.append(Notice("W108", self.path, reason, consequence))
         for first, last in self.lost_frames:
             span = f"damaged from {first / rate:.2f} s to {last / rate:.2f} s"
             reason = f"{span} ({(last - first) / rate:.2f} s lost)"
@@ -262,15 +264,12 @@ def _open_regular(path: str) -> tuple[int, int]:
 
 
 def _container(path: str, descriptor: int) -> str:
-    """Return the container by its first bytes; the ending of the name decides nothing."""
-    head = os.pread(descriptor, 16, 0)
-    for name, offset, magic in MAGICS:
-        if head[offset : offset + len(magic)] == magic:
-            return name
-    if len(head) >= 2 and head[0] == 0xFF and head[1] & 0xE6 == 0xE2:  # MPEG frame, layer III
-        return "MP3"
-    shown = head[:8].decode("ascii", "backslashreplace")
-    raise _refusal("E102", path, f"not an audio file (starts with {shown!r})")
+    """Return the container by content, or refuse the file."""
+    container = container_of(descriptor)
+    if container is None:
+        shown = os.pread(descriptor, 8, 0).decode("ascii", "backslashreplace")
+        raise _refusal("E102", path, f"not an audio file (starts with {shown!r})")
+    return container
 
 
 def _length_notices(path: str, layout: RiffLayout) -> list[Notice]:

@@ -33,9 +33,11 @@ DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be ave
 PATTERN_BAND_HZ = 700.0  # wide enough to tell sub-paths apart, narrow enough for a fair number
 PATTERN_SEARCH_S = 0.004
 PATTERN_ROUNDS = 2
-LEAST_BANDS = 5
+FEWEST_BANDS = 7  # made of a short band
+LEAST_BANDS = 5  # that must share the pattern
 LEAST_CORRELATION = 0.5
-LEAST_SHARE = 0.4  # of the sub-bands inside the traced band that must have been timed
+LEAST_POINTS = 6
+LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
 FIRST_LOOK = 9.0  # sums above this are followed even where crowded whistlers raise the first null
 APART_S = 1.5  # between peaks handled in one round: their ridges do not touch
@@ -63,8 +65,8 @@ class Pass:
     windows_s: tuple[float, ...]
 
 
-THIN = Pass(smooth=1, loss=0.25, width_s=0.012, windows_s=(0.06, 0.04, 0.025, 0.02))
-THICK = Pass(smooth=16, loss=0.3, width_s=0.064, windows_s=(0.15, 0.12, 0.10, 0.10))
+THIN = Pass(smooth=1, loss=0.25, width_s=0.012, windows_s=(0.06, 0.03, 0.02))
+THICK = Pass(smooth=16, loss=0.3, width_s=0.064, windows_s=(0.15, 0.12, 0.10))
 
 
 @dataclass(frozen=True)
@@ -216,7 +218,9 @@ def _peel_off(
                     (curve_s, _half_width_s(candidate.frequency_hz, curve_s, thickness_s))
                     for curve_s, thickness_s in ridges
                 ],
+                time_s=candidate.time_s,
             )
+        search.refresh()
 
 
 def _seen(detection: Detection, found: list[Detection]) -> bool:
@@ -280,7 +284,7 @@ def follow(
     Returns
     -------
     Detection or None
-        A trace spans at least 1.5 kHz, and two in five of its sub-bands were timed.
+        A trace spans at least 1.5 kHz, and half of its sub-bands were timed.
     """
     l_value, density = candidate.l_value, candidate.density_m3
     own = one_hop_curve(l_value, density, 0.0, model)
@@ -290,7 +294,7 @@ def follow(
     thickness_s: float | None = None
     for k, window_s in enumerate(resolution.windows_s):
         curve = one_hop_curve(l_value, density, time_s, model)
-        band_hz = candidate.band_hz if k < 2 else _full_band(l_value, spectrogram, model)
+        band_hz = candidate.band_hz if k == 0 else _full_band(l_value, spectrogram, model)
         view = straighten(audio, curve, band_hz=band_hz, reach_s=WIDEST_S)
         if view is None:
             return None
@@ -310,6 +314,7 @@ def follow(
             start=[(l_value, density)],
             lightning_time_s=time_s,
             model=model,
+            final=False,
         )
         (l_value, density), time_s = fit.start[0], fit.lightning_time_s
         if fit.at_bound[0]:
@@ -336,7 +341,7 @@ def _sharpen(
 ) -> tuple[TraceReading, tuple[float, float], float]:
     """Time wider sub-bands against the pattern they share; keep the old points if they share none."""
     low_hz, high_hz = reading.trace.frequency_hz[[0, -1]]
-    count = max(LEAST_BANDS, round((high_hz - low_hz) / PATTERN_BAND_HZ))
+    count = max(FEWEST_BANDS, round((high_hz - low_hz) / PATTERN_BAND_HZ))
     spacing_hz = (high_hz - low_hz) / count
     for _ in range(PATTERN_ROUNDS):
         curve = one_hop_curve(*start, time_s, model)
@@ -382,7 +387,8 @@ def _borne_out(reading: TraceReading) -> bool:
     span_hz = frequency_hz[-1] - frequency_hz[0]
     spacing_hz = float(np.min(np.diff(frequency_hz)))
     share = len(frequency_hz) / (1.0 + span_hz / spacing_hz)
-    return bool(span_hz >= LEAST_SPAN_HZ and share >= LEAST_SHARE and len(frequency_hz) >= 5)
+    enough = len(frequency_hz) >= LEAST_POINTS and share >= LEAST_SHARE
+    return bool(enough and span_hz >= LEAST_SPAN_HZ)
 
 
 __all__ = [

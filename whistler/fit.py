@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import least_squares
+from scipy.optimize import OptimizeResult, least_squares
 
 from fieldlines import (
     FieldLineModel,
@@ -31,6 +31,7 @@ L_LIMITS = (1.25, 7.5)
 DENSITY_LIMIT = 150.0  # factor either side of the climatology at L 3.2: room for five hops as one
 ROBUST_SCALE = 3.0
 OUTLIER_SIGMA = 4.5
+LEAST_POINTS = 4  # that a trace must keep when outliers are dropped
 
 
 @dataclass(frozen=True)
@@ -223,6 +224,7 @@ class _Problem:
         self.clock = 2 * self.paths  # place of the time among the unknowns; trace centres follow
         self.size = self.clock + 1 + len(traces)
         self.kept = [np.ones(len(item.trace.time_s), bool) for item in traces]
+        self._last: tuple[FloatArray, FloatArray, FloatArray] | None = None
 
     def residual(self, x: FloatArray) -> FloatArray:
         return self.evaluate(x)[0]
@@ -231,11 +233,20 @@ class _Problem:
         return self.evaluate(x)[1]
 
     def evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Residuals in sigmas and their derivatives: traces first, then ties."""
+        """Residuals in sigmas and their derivatives; the solver asks for one after the other."""
+        if self._last is None or not np.array_equal(self._last[0], x):
+            self._last = (x.copy(), *self._evaluate(x))
+        return self._last[1], self._last[2]
+
+    def keep(self, kept: list[NDArray[np.bool_]]) -> None:
+        """Use only these points of each trace from now on."""
+        self.kept = kept
+        self._last = None
+
+    def _evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Traces first, then where each lies within its thickness, then ties."""
         time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
-        parts = [
-            self._trace_part(number, kept, x, time_s) for number, kept in enumerate(self.kept)
-        ]
+        parts = [self._trace_part(number, kept, x, time_s) for number, kept in enumerate(self.kept)]
         centres = np.arange(self.clock + 1, self.size)
         parts.append((x[centres], np.eye(self.size)[centres]))
         parts += self._tie_parts(x, time_s)
@@ -308,6 +319,7 @@ def fit_stroke(
     lightning_time_s: float,
     model: FieldLineModel,
     ties: Ties = FREE,
+    final: bool = True,
 ) -> StrokeFit:
     """Return L and density of every path of a stroke, and its time.
 
@@ -323,6 +335,8 @@ def fit_stroke(
         Field, profile and ions.
     ties : Ties
         What else is known; by default the time is free.
+    final : bool
+        Whether to finish with outliers dropped; a robust pass alone is enough for a guess.
 
     Returns
     -------
@@ -333,38 +347,47 @@ def fit_stroke(
     low, high = problem.limits()
     x = np.append(np.log(np.array(start)).ravel(), np.zeros(1 + len(traces)))
     x = np.clip(x, low + 1e-6, high - 1e-6)
-    rough = least_squares(
+    found = _solve(problem, x, (low, high), loss="soft_l1", tolerance=1e-4)
+    if final:
+        _drop_outliers(problem, found.x)
+        found = _solve(problem, found.x, (low, high), loss="linear", tolerance=1e-7)
+    return _summary(problem, found.x, bool(found.success), low, high)
+
+
+def _solve(
+    problem: _Problem,
+    x: FloatArray,
+    bounds: tuple[FloatArray, FloatArray],
+    *,
+    loss: str,
+    tolerance: float,
+) -> OptimizeResult:
+    return least_squares(
         problem.residual,
         x,
         problem.jacobian,
-        bounds=(low, high),
-        loss="soft_l1",
+        bounds=bounds,
+        loss=loss,
         f_scale=ROBUST_SCALE,
         x_scale="jac",
+        ftol=tolerance,
+        xtol=tolerance,
+        gtol=tolerance,
         max_nfev=60,
     )
-    _drop_outliers(problem, rough.x)
-    final = least_squares(
-        problem.residual,
-        rough.x,
-        problem.jacobian,
-        bounds=(low, high),
-        x_scale="jac",
-        max_nfev=60,
-    )
-    return _summary(problem, final.x, bool(final.success), low, high)
 
 
 def _drop_outliers(problem: _Problem, x: FloatArray) -> None:
     residual = problem.residual(x)
+    masks = []
     at = 0
-    for k, kept in enumerate(problem.kept):
+    for kept in problem.kept:
         part = residual[at : at + kept.sum()]
         at += len(part)
         scale = max(1.0, float(np.median(np.abs(part))) / 0.6745)
         good = np.abs(part) <= OUTLIER_SIGMA * scale
-        if good.sum() >= 4:
-            problem.kept[k] = good
+        masks.append(good if good.sum() >= LEAST_POINTS else kept)
+    problem.keep(masks)
 
 
 def _summary(

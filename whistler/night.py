@@ -15,8 +15,8 @@ from typing import TYPE_CHECKING, Any
 
 from fieldlines.errors import FieldlinesError
 from whistler import __version__
-from whistler.audiofile import ENDINGS
 from whistler.catalogue import CATALOGUE_FILES, Entry, entry, json_text, write_catalogue
+from whistler.containers import ENDINGS
 from whistler.errors import BusyError, Notice, OutputError, RecordingError, Stopped, WhistlerError
 from whistler.recording import open_recording, peek_start
 from whistler.savefile import fault_notice, prepare_folder, unwritable, write_whole

@@ -15,7 +15,8 @@ CLIP = 5.0  # times the mean noise power; costs 0.03 dB in noise and takes the r
 BAND_RATIO = 1.2  # width of a sub-band: a curve stays straight in it to a fraction of its own cell
 RANGE_STARTS_HZ = (0.0, 1200.0)
 RANGE_ENDS_HZ = (3600.0, 6200.0)
-MARGIN_S = 1.5  # around a peeled ridge, where the sums are made again
+SUM_REACH_S = 1.2  # around a peeled ridge: curves that pass farther off share little with it
+ROW_REACH_S = 0.5
 NULL_WINDOW_S = 0.25
 NULL_STRIDE = 3  # every third template serves for the reversed recording
 
@@ -106,6 +107,8 @@ class CurveSearch:
         self._best = np.full(frames, -1e9, np.float32)
         self._which = np.zeros(frames, np.int32)
         self._level = np.zeros((len(self._rows), 1), np.float32)
+        self._stale_rows: list[tuple[int, int]] = []
+        self._stale_sums: list[tuple[int, int]] = []
         self._sum(0, frames)
         self._level, variance = _row_noise(self._rows)
         self._rows -= self._level
@@ -270,8 +273,10 @@ class CurveSearch:
         self,
         frequency_hz: NDArray[np.float64],
         ridges: list[tuple[NDArray[np.float64], NDArray[np.float64]]],
+        *,
+        time_s: float,
     ) -> None:
-        """Set the cells of ridges to the noise mean and make the sums near them again.
+        """Set the cells of ridges to the noise mean; :meth:`refresh` makes the sums again.
 
         Parameters
         ----------
@@ -279,27 +284,50 @@ class CurveSearch:
             Channels of the ridges.
         ridges : list of (curve_s, half_width_s)
             Middle and half width in time, each of shape (n,).
+        time_s : float
+            When they pass the reference frequency.
         """
         channel = np.searchsorted(self.spectrogram.frequency_hz, frequency_hz)
         channel = np.minimum(channel, self._excess.shape[1] - 1)
         last = 2 * self._excess.shape[2] - 1
-        first_frame, last_frame = last, 0
+        frames = [int(self._frame(np.array([time_s]), last)[0])]
         for curve_s, half_width_s in ridges:
             low = self._frame(curve_s - half_width_s, last)
             high = self._frame(curve_s + half_width_s, last)
             for c, a, b in zip(channel, low, high, strict=True):
                 for phase in (0, 1):
                     self._excess[phase, c, (a + 1 - phase) // 2 : (b - phase) // 2 + 1] = 0.0
-            first_frame, last_frame = min(first_frame, low.min()), max(last_frame, high.max())
-        reach = round(MARGIN_S / self._pair_s)
-        start = max(0, int(first_frame) // 2 - reach)
-        stop = min(len(self._best), int(last_frame) // 2 + reach)
-        self._sum(start, stop)
-        self._maximise(start, stop)
+            frames += [int(low.min()), int(high.max())]
+        row_reach, reach = (round(span / self._pair_s) for span in (ROW_REACH_S, SUM_REACH_S))
+        size = len(self._best)
+        self._stale_rows.append(
+            (max(0, min(frames) // 2 - row_reach), min(size, max(frames) // 2 + row_reach))
+        )
+        self._stale_sums.append((max(0, frames[0] // 2 - reach), min(size, frames[0] // 2 + reach)))
+
+    def refresh(self) -> None:
+        """Make the sums again wherever ridges have been peeled off since the last time."""
+        for start, stop in _merged(self._stale_rows):
+            self._sum(start, stop)
+        for start, stop in _merged(self._stale_sums):
+            self._maximise(start, stop)
+        self._stale_rows.clear()
+        self._stale_sums.clear()
 
     def _frame(self, time_s: NDArray[np.float64], last: int) -> NDArray[np.int64]:
         frame = np.rint((time_s - self._origin_s) / (0.5 * self._pair_s)).astype(np.int64)
         return np.clip(frame, 0, last)
+
+
+def _merged(spans: list[tuple[int, int]]) -> list[tuple[int, int]]:
+    """Join overlapping spans."""
+    joined: list[tuple[int, int]] = []
+    for start, stop in sorted(spans):
+        if joined and start <= joined[-1][1]:
+            joined[-1] = (joined[-1][0], max(stop, joined[-1][1]))
+        else:
+            joined.append((start, stop))
+    return joined
 
 
 @dataclass(frozen=True)

@@ -141,7 +141,7 @@ def _envelopes(
     bin_hz = frequency_hz[1]
     half = int(spacing_hz / bin_hz)
     window = np.hanning(2 * half + 1)
-    out_size = int(fft.next_fast_len(8 * len(window)))
+    out_size = int(fft.next_fast_len(4 * len(window)))
     step_s = size / rate_hz / out_size
     lag_s = step_s * np.arange(out_size) - 0.5
     near = np.abs(lag_s) <= reach_s

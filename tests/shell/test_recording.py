@@ -282,6 +282,32 @@ def test_a_flac_header_that_does_not_know_its_length(tmp_path: Path) -> None:
     assert np.array_equal(heard, expected[: len(heard)])
 
 
+@pytest.mark.parametrize("ending", [".aiff", ".w64", ".au", ".ogg"])
+def test_other_containers_tell_that_their_end_is_missing(tmp_path: Path, ending: str) -> None:
+    """Identity: half a file gives about half the frames, said to be a part."""
+    path = write(tmp_path / f"x{ending}", noise(4.0))
+    path.write_bytes(path.read_bytes()[: path.stat().st_size // 2])
+    recording = open_recording(path)
+    assert "W104" in codes(recording)
+    assert not recording.complete
+    assert 1.0 < recording.duration_s < 3.0
+
+
+def test_the_mp3_decoder_does_not_speak_for_itself(
+    tmp_path: Path, capfd: pytest.CaptureFixture[str]
+) -> None:
+    """Damage in MP3 comes as our own message, not as the decoder's text on standard error."""
+    path = write(tmp_path / "x.mp3", noise(10.0))
+    data = bytearray(path.read_bytes())
+    middle = len(data) // 2
+    data[middle : middle + 3000] = bytes(3000)
+    path.write_bytes(data)
+    recording = open_recording(path)
+    assert "W108" in codes(recording)
+    os.write(2, b"still open")
+    assert capfd.readouterr().err == "still open"
+
+
 def test_not_finite_samples_are_left_out(tmp_path: Path) -> None:
     """Reference: the three samples spoilt here."""
     source = noise()
