@@ -166,6 +166,15 @@ def test_figures_of_like_names_do_not_meet(whistler: Whistler, wav: Path) -> Non
     assert list((wav.parent / "two").glob("*.png")) == []
 
 
+def test_a_figure_that_fails_does_not_cost_the_numbers(whistler: Whistler, wav: Path) -> None:
+    write(wav.parent / "nofigure.wav")
+    run = whistler("measure", "nofigure.wav", wav.name, "--out", "out", "--quiet")
+    assert (run.code, run.codes) == (70, ["E701"])
+    rows = table(wav.parent / "out/catalogue.csv")
+    assert {row["recording"] for row in rows} == {"nofigure.wav", wav.name}
+    assert len(list((wav.parent / "out").glob("*.png"))) == 1
+
+
 def test_poor_signals_are_measured_and_told(whistler: Whistler, tmp_path: Path) -> None:
     spoilt = noise()
     spoilt[[10, 20], 0] = [np.nan, np.inf]

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from whistler.commands import common
-from whistler.errors import Notice, UsageError
+from whistler.errors import Notice, OutputError, UsageError
 
 if TYPE_CHECKING:
     from whistler.catalogue import Entry
@@ -56,7 +56,7 @@ def measure(
     run.measure(paths, start=began)
     if json:
         print(json_text(document(run.entries, settings), indent=1))
-    raise typer.Exit(common.exit_code(run.entries, run.refused))
+    raise typer.Exit(common.exit_code(run.entries, [*run.refused, *run.faults]))
 
 
 class _Run:
@@ -67,6 +67,7 @@ class _Run:
     ) -> None:
         self.entries: list[Entry] = []
         self.refused: list[Notice] = []
+        self.faults: list[Notice] = []
         self._settings = settings
         self._out = out
         self._figures = figures
@@ -104,8 +105,16 @@ class _Run:
         if self._out is None or not self._figures:
             return
         from whistler.figures import save_recording_figure
+        from whistler.savefile import fault_notice
 
-        save_recording_figure(measurement, self._figure_path(measurement.recording.path))
+        path = measurement.recording.path
+        try:
+            save_recording_figure(measurement, self._figure_path(path))
+        except OutputError:
+            raise
+        except Exception as error:  # a picture that fails must not cost the numbers
+            self.faults.append(fault_notice(path, error))
+            self._tell(self.faults[-1])
 
     def _print(self, text: str) -> None:
         """Print for reading; with a folder to fill, a reader who leaves does not end the work."""
