@@ -18,7 +18,8 @@ from fieldlines import FieldLineModel, maximum_frequency, saturated_density, tra
 REFERENCE_HZ = 3000.0  # where a candidate's time is quoted: inside every band this tool meets
 DUCT_LIMIT = 0.52  # of the equatorial gyrofrequency; ducted whistlers stop at half (from memory)
 DENSITY_SPREAD = 3.0  # factor either side of the climatology
-NODE_COUNT = 40
+NODE_COUNT = 32
+L_STEP_KNOTS = 12
 CHANNEL_HZ = 47.0  # width of a 21.3 ms channel
 
 
@@ -113,7 +114,7 @@ def curve_family(
     reach_hz = max(top_hz, min(1.05 * REFERENCE_HZ, 0.9 * gyro_hz))
     middle = float(np.log(saturated_density(l_value)))
     spread = np.log(DENSITY_SPREAD)
-    log_density = np.linspace(middle - spread, middle + spread + 2 * np.log(max_hops), 14)
+    log_density = np.linspace(middle - spread, middle + spread + 2 * np.log(max_hops), 12)
     log_frequency = np.linspace(np.log(0.95 * band_hz[0]), np.log(reach_hz), NODE_COUNT)
     time_s = travel_time(
         np.exp(log_frequency),
@@ -181,6 +182,8 @@ def build_bank(
     first principles).
     """
     step = 2.0 * np.sqrt(loss / 2.0)
+    knots = np.linspace(*l_range, L_STEP_KNOTS)
+    steps = [_l_step(float(k), model, band_hz=band_hz, step=step, width_s=width_s) for k in knots]
     rows: list[tuple[float, float, float]] = []
     curves: list[NDArray[np.float64]] = []
     l_value = l_range[0]
@@ -190,7 +193,7 @@ def build_bank(
         chosen = _lattice(density, metric, step)
         curves.append(_relative_delays(family, frequency_hz, chosen))
         rows += [(l_value, value, family.top_hz) for value in chosen]
-        l_value += _l_step(l_value, model, band_hz=band_hz, step=step, width_s=width_s)
+        l_value += float(np.interp(l_value, knots, steps))
     table = np.array(rows)
     return Bank(table[:, 0], table[:, 1], table[:, 2], np.concatenate(curves), frequency_hz)
 

@@ -39,7 +39,7 @@ LEAST_CORRELATION = 0.5
 LEAST_POINTS = 6
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
-FIRST_LOOK = 9.0  # sums above this are followed even where crowded whistlers raise the first null
+FIRST_LOOK = 9.0  # sums followed before the null is taken: whistlers crossing it would raise it
 APART_S = 1.5  # between peaks handled in one round: their ridges do not touch
 
 
@@ -173,18 +173,22 @@ def find_traces(
     for resolution in (THIN, THICK):
         bank = banks.bank(left.frequency_hz, resolution)
         search = CurveSearch(left, bank, smooth=resolution.smooth)
-        new = list(_peel_off(search, audio, spectrogram, banks.model, resolution, settings))
+        new = list(_peel_off(search, audio, spectrogram, banks.model, resolution, FIRST_LOOK))
         null = search.null()
         threshold = null.threshold(0.5 * settings.false_alarms_per_hour)
+        if threshold < FIRST_LOOK:
+            new += _peel_off(search, audio, spectrogram, banks.model, resolution, threshold)
         for detection in new:
             if detection.candidate.strength >= threshold and not _seen(detection, found):
-                rate = null.rate_per_hour(detection.candidate.strength)
-                kept = replace(
-                    detection, candidate=replace(detection.candidate, false_alarms_per_hour=rate)
-                )
-                found.append(kept)
-                _erase(left, kept, banks.model)
+                found.append(_rated(detection, null))
+                _erase(left, detection, banks.model)
     return found
+
+
+def _rated(detection: Detection, null: Null) -> Detection:
+    """State how often chance alone would be as strong."""
+    rate = null.rate_per_hour(detection.candidate.strength)
+    return replace(detection, candidate=replace(detection.candidate, false_alarms_per_hour=rate))
 
 
 def _peel_off(
@@ -193,11 +197,9 @@ def _peel_off(
     spectrogram: Spectrogram,
     model: FieldLineModel,
     resolution: Pass,
-    settings: Settings,
+    threshold: float,
 ) -> Iterator[Detection]:
-    """Follow and remove the strongest sums until only chance is left."""
-    null = search.null(bulk=True)
-    threshold = min(null.threshold(0.5 * settings.false_alarms_per_hour), FIRST_LOOK)
+    """Follow and remove the strongest sums until none is left above the threshold."""
     left = max(20, round(MOST_PER_MINUTE * spectrogram.power.shape[1] * spectrogram.hop_s / 60.0))
     while left > 0:
         peaks = search.peaks(threshold, apart_s=APART_S)
@@ -205,7 +207,7 @@ def _peel_off(
             return
         for at in peaks[:left]:
             left -= 1
-            candidate = search.candidate(at, null)
+            candidate = search.candidate(at)
             detection = follow(candidate, audio, spectrogram, model=model, resolution=resolution)
             ridges = [(candidate.curve_s, candidate.thickness_s)]
             if detection is not None:

@@ -31,6 +31,7 @@ L_LIMITS = (1.25, 7.5)
 DENSITY_LIMIT = 150.0  # factor either side of the climatology at L 3.2: room for five hops as one
 ROBUST_SCALE = 3.0
 OUTLIER_SIGMA = 4.5
+SMALL_SAMPLE = 1.5  # a misfit known from few points is itself uncertain (as Student's t allows for)
 LEAST_POINTS = 4  # that a trace must keep when outliers are dropped
 
 
@@ -402,7 +403,7 @@ def _summary(
     freedom = max(len(residual) - len(x), 1)
     chi_square = float(residual @ residual)
     covariance = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)[:used, :used]
-    covariance *= max(1.0, chi_square / freedom)
+    covariance *= max(1.0, chi_square / freedom) * (1.0 + SMALL_SAMPLE / freedom)
     unit = np.ones(used)
     unit[-1] = TIME_UNIT_S
     rms = []

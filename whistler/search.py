@@ -18,6 +18,7 @@ RANGE_ENDS_HZ = (3600.0, 6200.0)
 SUM_REACH_S = 1.2  # around a peeled ridge: curves that pass farther off share little with it
 ROW_REACH_S = 0.5
 NULL_WINDOW_S = 0.25
+NULL_QUANTILES = (0.5, 0.95)
 NULL_STRIDE = 3  # every third template serves for the reversed recording
 
 
@@ -173,15 +174,8 @@ class CurveSearch:
             stop,
         )
 
-    def null(self, *, bulk: bool = False) -> Null:
-        """Return the law of chance sums: the same bank over reversed time.
-
-        Parameters
-        ----------
-        bulk : bool
-            Judge by the weaker half of the windows only: for a first look at a recording whose
-            whistlers, not yet peeled off, cross the reversed curves.
-        """
+    def null(self) -> Null:
+        """Return the law of chance sums: the same bank over reversed time."""
         plan = self._plan
         frames = len(self._best)
         rows = np.zeros_like(self._rows)
@@ -201,7 +195,7 @@ class CurveSearch:
             0,
             frames,
         )
-        law = _gumbel(best, self._pair_s, (0.15, 0.5) if bulk else (0.5, 0.95))
+        law = _gumbel(best, self._pair_s)
         # A whole bank has more chances than every third curve of it; as if they were independent.
         return replace(law, location=law.location + law.scale * float(np.log(NULL_STRIDE)))
 
@@ -216,7 +210,7 @@ class CurveSearch:
                 kept.append(int(at))
         return kept
 
-    def candidate(self, at: int, null: Null) -> Candidate:
+    def candidate(self, at: int) -> Candidate:
         """Return the trace whose sum peaks at frame pair `at`."""
         code = int(self._which[at])
         template, start = divmod(code, len(self._starts))
@@ -229,7 +223,6 @@ class CurveSearch:
             at * self._pair_s + self._origin_s,
             (edges[first], edges[last]),
             strength,
-            null,
         )
 
     def _best_end(self, template: int, first: int, at: int) -> int:
@@ -253,7 +246,6 @@ class CurveSearch:
         time_s: float,
         band_hz: tuple[float, float],
         strength: float,
-        null: Null,
     ) -> Candidate:
         bank = self.bank
         inside = np.isfinite(bank.delay_s[template])
@@ -263,7 +255,7 @@ class CurveSearch:
             density_m3=float(bank.density_m3[template]),
             band_hz=(float(band_hz[0]), float(min(band_hz[1], bank.top_hz[template]))),
             strength=strength,
-            false_alarms_per_hour=null.rate_per_hour(strength),
+            false_alarms_per_hour=np.nan,
             frequency_hz=bank.frequency_hz[inside],
             curve_s=time_s + bank.delay_s[template, inside],
             thickness_s=self._pair_s,
@@ -391,7 +383,7 @@ def _sub_band_edges(frequency_hz: NDArray[np.float64]) -> NDArray[np.int64]:
 
 def _row_noise(rows: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
     """Level and variance of each row's noise, from its lower half: whistlers fill the upper one."""
-    sample = rows[:, :: max(1, rows.shape[1] // 1500)]
+    sample = rows[:, :: max(1, rows.shape[1] // 500)]
     low, middle = np.percentile(sample, [15.87, 50.0], axis=1)
     variance = np.maximum(middle - low, 1e-3) ** 2
     return middle[:, None].astype(np.float32), np.asarray(variance, np.float64)
@@ -416,14 +408,14 @@ def _range_scale(
     return scale
 
 
-def _gumbel(best: NDArray[np.float32], pair_s: float, quantiles: tuple[float, float]) -> Null:
+def _gumbel(best: NDArray[np.float32], pair_s: float) -> Null:
     """Gumbel law through two quantiles of the window maxima; outliers do not move it."""
     size = max(1, round(NULL_WINDOW_S / pair_s))
     count = max(len(best) // size, 1)
     maxima = best[: count * size].reshape(count, -1).max(axis=1)
-    lower, upper = np.quantile(maxima, quantiles)
+    lower, upper = np.quantile(maxima, NULL_QUANTILES)
     # Gumbel quantile: location - scale ln(-ln q).
-    place = -np.log(-np.log(quantiles))
+    place = -np.log(-np.log(NULL_QUANTILES))
     scale = max(float((upper - lower) / (place[1] - place[0])), 0.1)
     location = float(lower - scale * place[0])
     return Null(float(location), scale, size * pair_s)
