@@ -108,6 +108,10 @@ class Measurement:
 
         return plot_recording(self) if group is None else plot_stroke(self, group)
 
+    def __repr__(self) -> str:
+        """Return one line: the fields hold a whole spectrogram."""
+        return f"<Measurement of {self.recording.path!r}: {len(self.rows)} traces>"
+
     def _repr_html_(self) -> str:
         """Return the rows as a table for notebooks."""
         head = "".join(f"<th>{title}</th>" for title in _HTML_HEAD)
