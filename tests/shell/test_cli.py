@@ -21,7 +21,7 @@ def test_a_good_recording(whistler: Whistler, wav: Path) -> None:
     assert (run.code, run.err) == (0, "")
     assert wav.name in run.out
     assert "2025-03-14T02:15:00.000Z" in run.out
-    assert "3.000 0.012" in run.out
+    assert "3.000  0.012" in run.out
     assert max(map(len, run.out.splitlines())) <= 80
 
 

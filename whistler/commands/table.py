@@ -40,7 +40,7 @@ _FIELDS = (
     _Field("time", 10, lambda row: _number(row.sferic_time_s, ".3f") + " *"[row.sferic_seen]),
     _Field("hop", 3, lambda row: str(row.hops)),
     _Field("L", 6, lambda row: _number(row.l_value, ".3f")),
-    _Field("±", 5, lambda row: _number(row.l_value_sd, ".3f")),
+    _Field("±", 6, lambda row: _number(row.l_value_sd, ".3f" if row.l_value_sd > 1e-3 else ".4f")),
     _Field("(±)", 6, lambda row: f"({_number(row.l_value_profile_sd, '.2f')})"),
     _Field("n/cm3", 7, lambda row: _density(row.equatorial_density_cm3)),
     _Field("±", 5, lambda row: _density(row.equatorial_density_sd_cm3)),
