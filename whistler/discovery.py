@@ -37,6 +37,8 @@ FEWEST_BANDS = 7  # made of a short band
 LEAST_BANDS = 5  # that must share the pattern
 LEAST_CORRELATION = 0.5
 LEAST_POINTS = 6
+WEAK_SHARE = 0.1  # of the power of the strong sub-bands, below which one does not count
+MOST_MOVED_S = 0.05  # between the curve that was found and the one that was followed
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
 FIRST_LOOK = 9.0  # sums followed before the null is taken: whistlers crossing it would raise it
@@ -321,7 +323,8 @@ def follow(
         (l_value, density), time_s = fit.start[0], fit.lightning_time_s
         if fit.at_bound[0]:
             return None
-    if reading is None or not _borne_out(reading):
+    curve = one_hop_curve(l_value, density, time_s, model)
+    if reading is None or not (_borne_out(reading) and _as_found(candidate, curve)):
         return None
     reading, (l_value, density), time_s = _sharpen(
         audio, reading, (l_value, density), time_s, model=model
@@ -384,13 +387,25 @@ def _full_band(
     return float(spectrogram.frequency_hz[0]), max(top_hz, 2500.0)
 
 
+def _as_found(candidate: Candidate, curve: Curve) -> bool:
+    """Whether the trace still runs where the search saw power: else it is made of something else."""
+    inside = (candidate.frequency_hz >= candidate.band_hz[0]) & (
+        candidate.frequency_hz <= candidate.band_hz[1]
+    )
+    moved_s = curve(candidate.frequency_hz[inside]) - candidate.curve_s[inside]
+    return bool(np.median(np.abs(moved_s)) <= MOST_MOVED_S)
+
+
 def _borne_out(reading: TraceReading) -> bool:
-    frequency_hz = reading.trace.frequency_hz
+    """Whether enough sub-bands, over a wide enough band, carry a fair share of the power."""
+    strong = reading.snr >= WEAK_SHARE * np.quantile(reading.snr, 0.75)
+    frequency_hz = reading.trace.frequency_hz[strong]
+    if len(frequency_hz) < LEAST_POINTS:
+        return False
     span_hz = frequency_hz[-1] - frequency_hz[0]
-    spacing_hz = float(np.min(np.diff(frequency_hz)))
+    spacing_hz = float(np.min(np.diff(reading.trace.frequency_hz)))
     share = len(frequency_hz) / (1.0 + span_hz / spacing_hz)
-    enough = len(frequency_hz) >= LEAST_POINTS and share >= LEAST_SHARE
-    return bool(enough and span_hz >= LEAST_SPAN_HZ)
+    return bool(span_hz >= LEAST_SPAN_HZ and share >= LEAST_SHARE)
 
 
 __all__ = [

@@ -65,22 +65,30 @@ class Null:
         Gumbel parameters, in sigmas.
     window_s : float
         Length of the window.
+    strongest : float
+        Largest sum of the reversed recording: risers, of which the bulk of the windows knows nothing.
+    duration_s : float
+        Length of the recording.
     """
 
     location: float
     scale: float
     window_s: float
+    strongest: float
+    duration_s: float
 
     def rate_per_hour(self, strength: float) -> float:
         """Expected chance sums of at least this strength in an hour."""
         exponent = -(strength - self.location) / self.scale
         share = -np.expm1(-np.exp(min(exponent, 50.0)))
-        return float(3600.0 / self.window_s * share)
+        seen = 3600.0 / self.duration_s if strength <= self.strongest else 0.0
+        return float(max(3600.0 / self.window_s * share, seen))
 
     def threshold(self, rate_per_hour: float) -> float:
         """Strength exceeded by chance `rate_per_hour` times an hour."""
         share = min(rate_per_hour * self.window_s / 3600.0, 0.5)
-        return float(self.location - self.scale * np.log(-np.log1p(-share)))
+        gumbel = float(self.location - self.scale * np.log(-np.log1p(-share)))
+        return max(gumbel, self.strongest)
 
 
 class CurveSearch:
@@ -418,7 +426,7 @@ def _gumbel(best: NDArray[np.float32], pair_s: float) -> Null:
     place = -np.log(-np.log(NULL_QUANTILES))
     scale = max(float((upper - lower) / (place[1] - place[0])), 0.1)
     location = float(lower - scale * place[0])
-    return Null(float(location), scale, size * pair_s)
+    return Null(float(location), scale, size * pair_s, float(maxima.max()), len(best) * pair_s)
 
 
 def reference_delay_s(frequency_hz: NDArray[np.float64], curve_s: NDArray[np.float64]) -> float:
