@@ -1,7 +1,6 @@
 """Whitened, hum-free, sferic-blanked audio: what every later stage looks at.
 
-Order of work: band-limit to the analysed band and take out the mains harmonics in long Hann-windowed
-transforms; whiten by the median spectrum; mark the sferics in the time domain, keep them as a
+Order of work: band-limit and take out the mains harmonics in long Hann-windowed transforms; whiten by the median spectrum; mark the sferics in the time domain, keep them as a
 catalogue, blank them. Nothing downstream sees the original audio.
 """
 

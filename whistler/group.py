@@ -14,7 +14,8 @@ import numpy as np
 from fieldlines import FieldLineModel, saturated_density
 from fieldlines.constants import SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
-from whistler.fit import PathTrace, SfericTime, StrokeFit, Ties, fit_stroke, sferic_at
+from whistler.fit import StrokeFit, fit_stroke
+from whistler.problem import PathTrace, SfericTime, Ties, sferic_at
 from whistler.settings import Settings
 from whistler.sferic import (
     READING_SD_S,
@@ -162,7 +163,7 @@ def _read_hops(
 
 
 def predicted_sferic(
-    fit: StrokeFit, hops: int, settings: Settings
+    fit: StrokeFit, hops: int, *, settings: Settings
 ) -> tuple[float, float, FloatArray]:
     """Return where the causative sferic must be, its one-sigma, and its gradient.
 
@@ -188,7 +189,7 @@ def predicted_sferic(
 
 def _weigh(fit: StrokeFit, hops: int, sferics: SfericCatalogue, settings: Settings) -> _Reading:
     """Score one hop order: hop prior, sferic mixture and density prior together."""
-    predicted_s, sd_s, gradient = predicted_sferic(fit, hops, settings)
+    predicted_s, sd_s, gradient = predicted_sferic(fit, hops, settings=settings)
     late_s = front_lag_s(predicted_s - fit.lightning_time_s)
     causes = possible_causes(sferics, predicted_s=predicted_s + late_s, sd_s=sd_s)
     gain = fit.covariance @ gradient / sd_s**2
@@ -336,7 +337,9 @@ def _fit_group(
     settings: Settings,
 ) -> Stroke:
     path = _paths(members, partners)
-    traces = [PathTrace(found[k].trace, hops[k], path[k], found[k].centre_share_sd) for k in members]
+    traces = [
+        PathTrace(found[k].trace, hops[k], path[k], found[k].centre_share_sd) for k in members
+    ]
     first_of = {p: k for k, p in reversed(path.items())}
     start = []
     for p in sorted(first_of):
@@ -347,7 +350,7 @@ def _fit_group(
     reading = _weigh(free, hops[members[0]], sferics, settings)
     sferic, fit = None, free
     if reading.cause_probability > SURE:
-        predicted_s, _, _ = predicted_sferic(free, hops[members[0]], settings)
+        predicted_s, _, _ = predicted_sferic(free, hops[members[0]], settings=settings)
         late_s = front_lag_s(predicted_s - free.lightning_time_s)
         at = float(sferics.time_s[reading.best_cause]) - late_s
         sferic = SfericTime(at, READING_SD_S, hops[members[0]] % 2 == 1)

@@ -15,11 +15,11 @@ import numpy as np
 from fieldlines import FieldLineModel
 from whistler.cleaning import CleanAudio, clean
 from whistler.clock import decimal_year, iso_time
-from whistler.discovery import Banks, Detection, find_traces
+from whistler.discovery import Banks, find_traces
 from whistler.errors import Notice, printable
-from whistler.fit import Ties
 from whistler.group import FoundTrace, group_strokes
 from whistler.model import field_line_model
+from whistler.problem import Ties
 from whistler.recording import AudioBlock, Recording, open_recording
 from whistler.results import Sighting, stroke_rows
 from whistler.rows import COLUMNS, WhistlerRow
@@ -257,9 +257,9 @@ def _rows(
     found = [
         FoundTrace(
             item.reading.trace,
-            item.l_value,
-            item.density_m3,
-            item.lightning_time_s,
+            item.path.l_value,
+            item.path.density_m3,
+            item.path.lightning_time_s,
             item.reading.centre_share_sd,
         )
         for item in detections

@@ -77,7 +77,10 @@ def align(
     patterns = _patterns(view, travel_s / reference_s, grid_s, thickness_s)
     shift_s, correlation = _common_shifts(patterns, search_s)
     aligned = np.stack(
-        [np.interp(grid_s + shift, grid_s, row) for shift, row in zip(shift_s, patterns, strict=True)]
+        [
+            np.interp(grid_s + shift, grid_s, row)
+            for shift, row in zip(shift_s, patterns, strict=True)
+        ]
     )
     centre_s, width_s, cells = _shape(aligned.mean(axis=0), grid_s, view.band_width_hz)
     return Alignment(

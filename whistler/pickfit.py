@@ -10,9 +10,10 @@ import numpy as np
 from fieldlines import saturated_density, travel_time
 from whistler.clock import decimal_year, iso_time
 from whistler.errors import Notice, UsageError
-from whistler.fit import PathTrace, SfericTime, Ties, fit_stroke
+from whistler.fit import fit_stroke
 from whistler.group import Stroke
 from whistler.model import field_line_model
+from whistler.problem import PathTrace, SfericTime, Ties
 from whistler.results import Sighting, stroke_rows
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings

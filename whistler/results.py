@@ -16,8 +16,9 @@ from fieldlines import (
     zero_frequency_dispersion,
 )
 from fieldlines.errors import FloatArray
-from whistler.fit import PathTrace, StrokeFit, Ties, fit_stroke
+from whistler.fit import StrokeFit, fit_stroke
 from whistler.group import Stroke, predicted_sferic
+from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN, WhistlerRow
 from whistler.settings import Settings
 from whistler.uncertainty import profile_covariance, uncertainty_status
@@ -99,7 +100,7 @@ def stroke_rows(
         _path_numbers(stroke, path, profile[path], model, ties, settings)
         for path in range(len(fit.log_l))
     ]
-    sferic_s, sferic_sd_s, _ = predicted_sferic(fit, stroke.hops[0], settings)
+    sferic_s, sferic_sd_s, _ = predicted_sferic(fit, stroke.hops[0], settings=settings)
     if stroke.sferic is not None:
         sferic_s, sferic_sd_s = stroke.sferic.time_s, stroke.sferic.sd_s
     rows = []

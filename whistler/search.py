@@ -8,17 +8,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from whistler.bank import REFERENCE_HZ, Bank
+from whistler.chance import Null, chance_law
 from whistler.curvesum import slope_sums, template_maxima
+from whistler.rowplan import plan_rows, range_scale, row_noise
 from whistler.spectrogram import Spectrogram
 
 CLIP = 5.0  # times the mean noise power; costs 0.03 dB in noise and takes the rest of the sferics
-BAND_RATIO = 1.2  # width of a sub-band: a curve stays straight in it to a fraction of its own cell
 RANGE_STARTS_HZ = (0.0, 1200.0)
 RANGE_ENDS_HZ = (3600.0, 6200.0)
 SUM_REACH_S = 1.2  # around a peeled ridge: curves that pass farther off share little with it
 ROW_REACH_S = 0.5
-NULL_WINDOW_S = 0.25
-NULL_QUANTILES = (0.5, 0.95)
 NULL_STRIDE = 3  # every third template serves for the reversed recording
 
 
@@ -55,42 +54,6 @@ class Candidate:
     thickness_s: float
 
 
-@dataclass(frozen=True)
-class Null:
-    """Gumbel law of the strongest chance sum in a short window, from the reversed recording.
-
-    Parameters
-    ----------
-    location, scale : float
-        Gumbel parameters, in sigmas.
-    window_s : float
-        Length of the window.
-    strongest : float
-        Largest sum of the reversed recording: risers, of which the bulk of the windows knows nothing.
-    duration_s : float
-        Length of the recording.
-    """
-
-    location: float
-    scale: float
-    window_s: float
-    strongest: float
-    duration_s: float
-
-    def rate_per_hour(self, strength: float) -> float:
-        """Expected chance sums of at least this strength in an hour."""
-        exponent = -(strength - self.location) / self.scale
-        share = -np.expm1(-np.exp(min(exponent, 50.0)))
-        seen = 3600.0 / self.duration_s if strength <= self.strongest else 0.0
-        return float(max(3600.0 / self.window_s * share, seen))
-
-    def threshold(self, rate_per_hour: float) -> float:
-        """Strength exceeded by chance `rate_per_hour` times an hour."""
-        share = min(rate_per_hour * self.window_s / 3600.0, 0.5)
-        gumbel = float(self.location - self.scale * np.log(-np.log1p(-share)))
-        return max(gumbel, self.strongest)
-
-
 class CurveSearch:
     """The bank laid over one spectrogram, ready to be searched and peeled.
 
@@ -110,7 +73,7 @@ class CurveSearch:
         self._step = max(1, smooth // 2)
         self._excess = self._prepare(np.minimum(spectrogram.power, np.float32(CLIP)), smooth)
         self._pair_s = 2 * self._step * spectrogram.hop_s
-        self._plan = _plan_rows(bank, spectrogram.frequency_hz, self._pair_s / 2)
+        self._plan = plan_rows(bank, spectrogram.frequency_hz, self._pair_s / 2)
         frames = self._excess.shape[2]
         self._rows = np.zeros((len(self._plan.first_channel), frames), np.float32)
         self._best = np.full(frames, -1e9, np.float32)
@@ -119,9 +82,9 @@ class CurveSearch:
         self._stale_rows: list[tuple[int, int]] = []
         self._stale_sums: list[tuple[int, int]] = []
         self._sum(0, frames)
-        self._level, variance = _row_noise(self._rows)
+        self._level, variance = row_noise(self._rows)
         self._rows -= self._level
-        self._scale = _range_scale(variance, self._plan, self._starts, self._ends)
+        self._scale = range_scale(variance, self._plan, self._starts, self._ends)
         self._maximise(0, frames)
 
     def _prepare(self, power: NDArray[np.float32], smooth: int) -> NDArray[np.float32]:
@@ -203,7 +166,7 @@ class CurveSearch:
             0,
             frames,
         )
-        law = _gumbel(best, self._pair_s)
+        law = chance_law(best, frame_s=self._pair_s)
         # A whole bank has more chances than every third curve of it; as if they were independent.
         return replace(law, location=law.location + law.scale * float(np.log(NULL_STRIDE)))
 
@@ -328,105 +291,6 @@ def _merged(spans: list[tuple[int, int]]) -> list[tuple[int, int]]:
         else:
             joined.append((start, stop))
     return joined
-
-
-@dataclass(frozen=True)
-class _RowPlan:
-    """How templates share sub-band rows."""
-
-    edges_hz: NDArray[np.float64]
-    first_channel: NDArray[np.int64]
-    channel_count: NDArray[np.int64]
-    shift: NDArray[np.int64]
-    row_index: NDArray[np.int64]
-    offset: NDArray[np.int64]
-    band_count: NDArray[np.int64]
-
-
-def _plan_rows(bank: Bank, frequency_hz: NDArray[np.float64], frame_s: float) -> _RowPlan:
-    """Quantise every template to straight pieces and share the pieces."""
-    edges = _sub_band_edges(frequency_hz)
-    edges_hz = np.append(frequency_hz[edges[:-1]], frequency_hz[-1])
-    bands = len(edges) - 1
-    row_index = np.zeros((len(bank), bands), np.int64)
-    offset = np.zeros((len(bank), bands), np.int64)
-    band_count = np.zeros(len(bank), np.int64)
-    first, count, shifts = [], [], []
-    widest = int(np.diff(edges).max())
-    for b in range(bands):
-        a, z = edges[b], edges[b + 1]
-        spread = (bank.delay_s[:, z - 1] - bank.delay_s[:, a]) / (2.0 * frame_s)
-        reached = np.isfinite(spread)
-        band_count[reached] = b + 1
-        kind, inverse = np.unique(np.rint(spread[reached]).astype(int), return_inverse=True)
-        row_index[reached, b] = inverse + len(first)
-        middle = bank.delay_s[reached, a:z].mean(axis=1)
-        offset[reached, b] = np.rint(middle / (2.0 * frame_s)).astype(int)
-        place = np.linspace(-0.5, 0.5, z - a) if z - a > 1 else np.zeros(1)
-        for value in kind:
-            shift = np.zeros(widest, np.int64)
-            shift[: z - a] = np.rint(2.0 * value * place).astype(int)
-            first.append(a)
-            count.append(z - a)
-            shifts.append(shift)
-    return _RowPlan(
-        edges_hz,
-        np.array(first),
-        np.array(count),
-        np.array(shifts),
-        row_index,
-        offset,
-        band_count,
-    )
-
-
-def _sub_band_edges(frequency_hz: NDArray[np.float64]) -> NDArray[np.int64]:
-    edges = [0]
-    while edges[-1] < len(frequency_hz):
-        top_hz = frequency_hz[edges[-1]] * BAND_RATIO
-        following = int(np.searchsorted(frequency_hz, top_hz))
-        edges.append(min(max(following, edges[-1] + 2), len(frequency_hz)))
-    return np.array(edges)
-
-
-def _row_noise(rows: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
-    """Level and variance of each row's noise, from its lower half: whistlers fill the upper one."""
-    sample = rows[:, :: max(1, rows.shape[1] // 500)]
-    low, middle = np.percentile(sample, [15.87, 50.0], axis=1)
-    variance = np.maximum(middle - low, 1e-3) ** 2
-    return middle[:, None].astype(np.float32), np.asarray(variance, np.float64)
-
-
-def _range_scale(
-    variance: NDArray[np.float64],
-    plan: _RowPlan,
-    starts: NDArray[np.int64],
-    ends: NDArray[np.int64],
-) -> NDArray[np.float32]:
-    """One over the noise sigma of each searched range of each template."""
-    templates, bands = plan.row_index.shape
-    scale = np.zeros((templates, len(starts), bands + 1), np.float32)
-    by_band = np.where(np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0)
-    total = np.pad(np.cumsum(by_band, axis=1), ((0, 0), (1, 0)))
-    for s, first in enumerate(starts):
-        for b in range(first + 3, bands + 1):
-            searched = (plan.band_count == b) | ((ends[b] == 1) & (plan.band_count >= b))
-            spread = total[:, b] - total[:, first]
-            scale[searched, s, b] = 1.0 / np.sqrt(spread[searched])
-    return scale
-
-
-def _gumbel(best: NDArray[np.float32], pair_s: float) -> Null:
-    """Gumbel law through two quantiles of the window maxima; outliers do not move it."""
-    size = max(1, round(NULL_WINDOW_S / pair_s))
-    count = max(len(best) // size, 1)
-    maxima = best[: count * size].reshape(count, -1).max(axis=1)
-    lower, upper = np.quantile(maxima, NULL_QUANTILES)
-    # Gumbel quantile: location - scale ln(-ln q).
-    place = -np.log(-np.log(NULL_QUANTILES))
-    scale = max(float((upper - lower) / (place[1] - place[0])), 0.1)
-    location = float(lower - scale * place[0])
-    return Null(float(location), scale, size * pair_s, float(maxima.max()), len(best) * pair_s)
 
 
 def reference_delay_s(frequency_hz: NDArray[np.float64], curve_s: NDArray[np.float64]) -> float:

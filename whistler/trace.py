@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from scipy import fft, ndimage
 
 from whistler.cleaning import LN2, CleanAudio
+from whistler.spectrogram import Spectrogram
 
 PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise is measured there
 SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
@@ -291,21 +292,13 @@ def _timing_sd(
     return np.hypot(noise_s * np.sqrt(speckle), thickness_s / np.sqrt(speckle)) + 1e-4
 
 
-def median_snr_db(
-    power: NDArray[np.float32],
-    channel_hz: NDArray[np.float64],
-    frame_s: NDArray[np.float64],
-    trace: Trace,
-    curve: Curve,
-) -> float:
+def median_snr_db(spectrogram: Spectrogram, trace: Trace, *, curve: Curve) -> float:
     """Return the median strength of the ridge, dB over the noise, over the trace's band.
 
     Parameters
     ----------
-    power : ndarray, shape (channels, frames)
-        Normalised spectrogram.
-    channel_hz, frame_s : ndarray
-        Its axes.
+    spectrogram : Spectrogram
+        Normalised power.
     trace : Trace
         Gives the band.
     curve : callable
@@ -316,12 +309,14 @@ def median_snr_db(
     float
         Ridge power in a 21.3 ms Hann cell over the mean noise there; NaN when nothing is inside.
     """
+    channel_hz, power = spectrogram.frequency_hz, spectrogram.power
     inside = (channel_hz >= trace.frequency_hz.min()) & (channel_hz <= trace.frequency_hz.max())
-    at = np.rint((curve(channel_hz[inside]) - frame_s[0]) / (frame_s[1] - frame_s[0])).astype(int)
-    valid = (at >= 1) & (at < len(frame_s) - 1)
+    frame = np.rint((curve(channel_hz[inside]) - spectrogram.start_s) / spectrogram.hop_s)
+    at = frame.astype(int)
+    valid = (at >= 1) & (at < power.shape[1] - 1)
     if not valid.any():
         return float("nan")
     channels = np.flatnonzero(inside)[valid]
     ridge = np.maximum.reduce([power[channels, at[valid] + k] for k in (-1, 0, 1)])
-    # Largest of three overlapping cells over pure noise averages about 1.5; take that out.
+    # The largest of three overlapping cells of pure noise averages about 1.5; take that out.
     return float(10 * np.log10(max(np.median(ridge) - 0.5, 1e-3)))

@@ -10,7 +10,8 @@ import numpy as np
 from fieldlines import ChapmanLayer, FieldLineModel
 from fieldlines.constants import SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
-from whistler.fit import PathTrace, StrokeFit, Ties, fit_stroke
+from whistler.fit import StrokeFit, fit_stroke
+from whistler.problem import PathTrace, Ties
 from whistler.settings import Settings
 
 UNDETERMINED_LOG_L = 0.10  # one-sigma of ln L beyond which an L is not worth printing
