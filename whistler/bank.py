@@ -224,7 +224,8 @@ def _lattice(
         [[0.0], np.cumsum(0.5 * np.sqrt(metric[1:]) + 0.5 * np.sqrt(metric[:-1]))]
     ) * (log_density[1] - log_density[0])
     count = max(2, int(np.ceil(distance[-1] / step)) + 1)
-    return np.exp(np.interp(np.linspace(0, distance[-1], count), distance, log_density))
+    places = np.linspace(0.0, distance[-1], count)
+    return np.asarray(np.exp(np.interp(places, distance, log_density)))
 
 
 def _l_step(

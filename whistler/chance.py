@@ -22,7 +22,7 @@ class Null:
     window_s : float
         Length of the window.
     strongest : float
-        Largest sum of the reversed recording: risers, of which the bulk of the windows knows nothing.
+        Largest sum of the reversed recording: risers, of which the bulk knows nothing.
     duration_s : float
         Length of the recording.
     """

@@ -1,7 +1,8 @@
 """Whitened, hum-free, sferic-blanked audio: what every later stage looks at.
 
-Order of work: band-limit and take out the mains harmonics in long Hann-windowed transforms; whiten by the median spectrum; mark the sferics in the time domain, keep them as a
-catalogue, blank them. Nothing downstream sees the original audio.
+Order of work: band-limit and take out the mains harmonics in long Hann-windowed transforms;
+whiten by the median spectrum; mark the sferics in the time domain, keep them as a catalogue,
+blank them. Nothing downstream sees the original audio.
 """
 
 from __future__ import annotations
@@ -12,14 +13,13 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import fft, ndimage
 
+from whistler.recording import AudioBlock
 from whistler.settings import Settings
 from whistler.sferic import SfericCatalogue, catalogue_sferics
 
 ANALYSIS_RATE_HZ = 24_000.0  # band to 12 kHz; lower input rates are kept as they are
-TRANSFORM_S = (
-    65_536 / 48_000
-)  # 1.4 s: 0.73 Hz resolution, and mains drift stays inside a bin or two
-WHITENING_WINDOW_S = 512 / 24_000
+TRANSFORM_S = 1.365  # 0.73 Hz resolution, and mains drift stays inside a bin or two
+WHITENING_WINDOW_S = 0.0213
 HUM_TOP_HZ = 3000.0
 HUM_TOLERANCE = 0.004  # the grid is held to 0.2 Hz of 50 Hz in ordinary times (common practice)
 HUM_EXCESS = 6.0  # a line is taken out where it stands this far above its surroundings
@@ -81,26 +81,13 @@ def _plan(sample_rate_hz: float) -> _BandPlan:
     return _BandPlan(size_in, size_out, sample_rate_hz)
 
 
-def clean(
-    samples: NDArray[np.float32],
-    usable: NDArray[np.bool_],
-    *,
-    sample_rate_hz: float,
-    start_s: float,
-    settings: Settings,
-) -> CleanAudio:
+def clean(block: AudioBlock, *, settings: Settings) -> CleanAudio:
     """Return the whitened, hum-free, sferic-blanked form of one block of audio.
 
     Parameters
     ----------
-    samples : ndarray, shape (n,), float32
-        Audio, any scale; at least one transform (1.4 s) is padded to.
-    usable : ndarray, shape (n,), bool
-        False where the input was missing or not finite.
-    sample_rate_hz : float
-        Rate of `samples`, 8 kHz to 200 kHz.
-    start_s : float
-        Time of the first sample, from the recording's first frame.
+    block : AudioBlock
+        Audio at any scale; at least one transform (1.4 s) is padded to.
     settings : Settings
         Mains frequency and analysed band.
 
@@ -109,9 +96,10 @@ def clean(
     CleanAudio
         The block as the search and the tracing see it.
     """
-    plan = _plan(sample_rate_hz)
-    audio, mains_hz = _band_limit(samples, plan, settings)
-    missing = _missing_at(usable, len(audio), plan)
+    plan = _plan(float(block.sample_rate_hz))
+    start_s = block.first_frame / block.sample_rate_hz
+    audio, mains_hz = _band_limit(block.samples, plan, settings)
+    missing = _missing_at(block.usable, len(audio), plan)
     whitened = _whiten(audio, plan.rate_hz, settings)
     sferics, marked = catalogue_sferics(whitened, sample_rate_hz=plan.rate_hz)
     blanked = marked | missing
@@ -165,7 +153,8 @@ def _edge_taper(count: int, bin_hz: float, top_hz: float) -> NDArray[np.float32]
     frequency_hz = np.arange(count) * bin_hz
     rise = np.clip((frequency_hz - 150.0) / 150.0, 0.0, 1.0)
     fall = np.clip((min(1.08 * top_hz, count * bin_hz) - frequency_hz) / (0.08 * top_hz), 0.0, 1.0)
-    return (np.sin(0.5 * np.pi * rise) ** 2 * np.sin(0.5 * np.pi * fall) ** 2).astype(np.float32)
+    taper = np.sin(0.5 * np.pi * rise) ** 2 * np.sin(0.5 * np.pi * fall) ** 2
+    return np.asarray(taper, np.float32)
 
 
 def _remove_mains(spectrum: NDArray[np.complex64], bin_hz: float, nominal_hz: float) -> float:
@@ -219,8 +208,9 @@ def _whiten(audio: NDArray[np.float32], rate_hz: float, settings: Settings) -> N
     grid = np.arange(total // 2 + 1) * (len(level) - 1) / (total // 2)
     response = np.interp(grid, np.arange(len(level)), gain).astype(np.float32)
     white = fft.irfft(fft.rfft(audio, total) * response, total)[: len(audio)]
-    sigma = np.median(np.abs(white[white != 0.0][::7])) / 0.6745
-    return (white / sigma).astype(np.float32)
+    heard = np.abs(white[white != 0.0][::7])
+    sigma = float(np.median(heard)) / 0.6745 if len(heard) else 0.0
+    return np.asarray(white / sigma if sigma > 0.0 else white * 0.0, np.float32)
 
 
 def _median_level(audio: NDArray[np.float32], size: int) -> NDArray[np.float64]:

@@ -1,8 +1,8 @@
 """Power summed along curves: the two compiled loops the search spends its time in.
 
-Level one sums the channels of a sub-band along straight lines of every slope that occurs; level two
-adds one such row per sub-band for each template. The rows live on every second frame; their channels
-are taken at single-frame precision.
+Level one sums the channels of a sub-band along straight lines of every slope that occurs; level
+two adds one such row per sub-band for each template. The rows live on every second frame; their
+channels are taken at single-frame precision.
 """
 
 from __future__ import annotations

@@ -179,7 +179,7 @@ def _summary(
         chi_square=chi_square,
         freedom=freedom,
         converged=converged,
-        at_bound=near.any(axis=1),
+        at_bound=np.asarray(near.any(axis=1)),
     )
 
 

@@ -181,7 +181,7 @@ def _full_band(
 
 
 def _as_found(candidate: Candidate, path: OneHop, model: FieldLineModel) -> bool:
-    """Whether the trace still runs where the search saw power: else it is made of something else."""
+    """Whether the trace still runs where the search saw power, and not through something else."""
     inside = (candidate.frequency_hz >= candidate.band_hz[0]) & (
         candidate.frequency_hz <= candidate.band_hz[1]
     )
@@ -205,7 +205,7 @@ def _borne_out(reading: TraceReading) -> bool:
 def _sharpen(
     audio: CleanAudio, reading: TraceReading, *, path: OneHop, model: FieldLineModel
 ) -> tuple[TraceReading, OneHop]:
-    """Time wider sub-bands against the pattern they share; keep the old points if they share none."""
+    """Time wider sub-bands on the pattern they share; keep the old points if they share none."""
     low_hz, high_hz = reading.trace.frequency_hz[[0, -1]]
     count = max(FEWEST_BANDS, round((high_hz - low_hz) / PATTERN_BAND_HZ))
     sharper, better = reading, path

@@ -145,7 +145,7 @@ def group_strokes(
 def _read_hops(
     item: FoundTrace, sferics: SfericCatalogue, model: FieldLineModel, settings: Settings
 ) -> dict[int, _Reading]:
-    readings = {}
+    readings: dict[int, _Reading] = {}
     for hops in range(1, settings.max_hops + 1):
         density = item.density_m3 / hops**2
         prior_dex = np.log10(density / float(saturated_density(np.clip(item.l_value, 1.2, 8.0))))
@@ -228,11 +228,15 @@ def _density_score(
     return np.log(np.maximum(total, 1e-30))
 
 
+def _likeliest(readings: dict[int, _Reading]) -> int:
+    return max(readings, key=lambda hops: readings[hops].score)
+
+
 def _assign_hops(
     readings: list[dict[int, _Reading]],
 ) -> tuple[list[int], dict[tuple[int, int], float]]:
     """Hop order of every trace, moved pair by pair where an echo train explains both better."""
-    hops = [max(item, key=lambda h, item=item: item[h].score) for item in readings]
+    hops = [_likeliest(item) for item in readings]
     partners: dict[tuple[int, int], float] = {}
     for i in range(len(readings)):
         for j in range(len(readings)):

@@ -17,6 +17,7 @@ from whistler.cleaning import CleanAudio, clean
 from whistler.clock import decimal_year, iso_time
 from whistler.discovery import Banks, find_traces
 from whistler.errors import Notice, printable
+from whistler.follow import Detection
 from whistler.group import FoundTrace, group_strokes
 from whistler.model import field_line_model
 from whistler.problem import Ties
@@ -188,7 +189,7 @@ def measure_recording(
         recording=recording,
         settings=settings,
         rows=tuple(rows),
-        notices=tuple(_notices(recording)),
+        notices=(),
         views=tuple(result.view for result in results) if keep else (),
         sferics=sferics,
         model=model,
@@ -210,13 +211,7 @@ def _measure_block(
 ) -> _BlockResult:
     start_s = block.first_frame / recording.sample_rate_hz
     end_s = start_s + len(block.samples) / recording.sample_rate_hz
-    audio = clean(
-        block.samples,
-        block.usable,
-        sample_rate_hz=float(recording.sample_rate_hz),
-        start_s=start_s,
-        settings=settings,
-    )
+    audio = clean(block, settings=settings)
     view = spectrogram(audio, band_low_hz=settings.band_low_hz)
     # What the overlap shows twice belongs to the block that holds more of it.
     low_s = start_s + 0.5 * OVERLAP_S if block.first_frame > 0 else -np.inf
@@ -286,10 +281,3 @@ def _rows(
         ):
             rows.append(replace(row, time=iso_time(recording.time_at(row.sferic_time_s))))
     return sorted(rows, key=lambda row: (row.group, row.hops, row.l_value, row.frequency_low_hz))
-
-
-def _notices(recording: Recording) -> list[Notice]:
-    if recording.start_time is not None:
-        return []
-    reason = "no date: the dipole of 2025.0 is used"
-    return [Notice("N302", recording.path, reason, "give --start for the dipole of the day")]

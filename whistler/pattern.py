@@ -1,9 +1,10 @@
 """Time sub-bands against the pattern they share.
 
-A duct is not one path: its sub-paths differ a little in density, so a whistler is a bundle of pulses
-whose delays all scale with the travel time. In lag divided by travel time the bundle looks the same
-at every frequency, however ragged it is. Aligning the sub-bands on that common pattern times them
-to a fraction of the bundle's width; where the pattern sits as a whole is a question of density only.
+A duct is not one path: its sub-paths differ a little in density, so a whistler is a bundle of
+pulses whose delays all scale with the travel time. In lag divided by travel time the bundle looks
+the same at every frequency, however ragged it is. Aligning the sub-bands on that common pattern
+times them to a fraction of the bundle's width; where the pattern sits as a whole is a question of
+density only. Where sub-bands share no pattern, the caller keeps their own centres.
 """
 
 from __future__ import annotations
@@ -48,7 +49,7 @@ class Alignment:
     centre_share_sd: float
 
     def lag_sd_s(self, band_width_hz: float) -> FloatArray:
-        """Return the one-sigma of each lag: the less a sub-band looks like the others, the larger."""
+        """Return the one-sigma of each lag: larger the less a sub-band looks like the others."""
         unlike = np.sqrt(np.maximum(1.0 - self.correlation**2, 0.01))
         return LAG_SD / band_width_hz * unlike / np.maximum(self.correlation, 0.1) + 5e-5
 

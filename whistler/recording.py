@@ -299,7 +299,8 @@ def _notices(
     yield from _dead_channel_notices(audio, survey, chosen=chosen)
     if begin.time is None:
         reason = "nothing tells when it began"
-        yield Notice("N301", audio.path, reason, "times are relative; give --start to date them")
+        step = "times are relative, the field of 2025.0 is used; give --start to date them"
+        yield Notice("N301", audio.path, reason, step)
 
 
 def _dead_channel_notices(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass, replace
 
 import numpy as np
 
@@ -58,6 +58,7 @@ class _PathNumbers:
     density_profile_sd_m3: float = NAN
     correlation: float = NAN
     status: str = "undetermined"
+    leaning: StrokeFit | None = None  # the fit the numbers are from, where a prior had to help
 
 
 def stroke_rows(
@@ -100,67 +101,95 @@ def stroke_rows(
         _path_numbers(stroke, path, profile[path], model, ties, settings)
         for path in range(len(fit.log_l))
     ]
-    sferic_s, sferic_sd_s, _ = predicted_sferic(fit, stroke.hops[0], settings=settings)
+    return [
+        _row(
+            stroke,
+            number,
+            numbers,
+            sighting,
+            recording=recording,
+            group=group,
+            model=model,
+            settings=settings,
+        )
+        for number, sighting in enumerate(sightings)
+    ]
+
+
+def _row(
+    stroke: Stroke,
+    number: int,
+    numbers: Sequence[_PathNumbers],
+    sighting: Sighting,
+    *,
+    recording: str,
+    group: int,
+    model: FieldLineModel,
+    settings: Settings,
+) -> WhistlerRow:
+    item = stroke.traces[number]
+    found = numbers[item.path]
+    fit = found.leaning or stroke.fit
+    sferic_s, sferic_sd_s, _ = predicted_sferic(fit, item.hops, settings=settings)
     if stroke.sferic is not None:
         sferic_s, sferic_sd_s = stroke.sferic.time_s, stroke.sferic.sd_s
-    rows = []
-    for item, sighting, rms_s in zip(stroke.traces, sightings, fit.rms_s, strict=True):
-        found = numbers[item.path]
-        rows.append(
-            WhistlerRow(
-                recording=recording,
-                group=group,
-                sferic_time_s=sferic_s,
-                sferic_time_sd_s=sferic_sd_s,
-                sferic_seen=stroke.sferic is not None,
-                lightning_time_s=fit.lightning_time_s,
-                hops=item.hops,
-                l_value=found.l_value,
-                l_value_sd=found.l_sd,
-                l_value_profile_sd=found.l_profile_sd,
-                equatorial_density_cm3=found.density_m3 / 1e6,
-                equatorial_density_sd_cm3=found.density_sd_m3 / 1e6,
-                equatorial_density_profile_sd_cm3=found.density_profile_sd_m3 / 1e6,
-                l_density_correlation=found.correlation,
-                frequency_low_hz=float(item.trace.frequency_hz.min()),
-                frequency_high_hz=float(item.trace.frequency_hz.max()),
-                snr_db=sighting.snr_db,
-                significance=sighting.significance,
-                fit_rms_s=float(rms_s),
-                uncertainty_status=found.status,
-                flags=_flags(stroke, item, sighting),
-                trace=item.trace,
-                **_derived(fit, item.path, found, model),
-            )
-        )
-    return rows
+    return WhistlerRow(
+        recording=recording,
+        group=group,
+        sferic_time_s=sferic_s,
+        sferic_time_sd_s=sferic_sd_s,
+        sferic_seen=stroke.sferic is not None,
+        lightning_time_s=fit.lightning_time_s,
+        hops=item.hops,
+        l_value=found.l_value,
+        l_value_sd=found.l_sd,
+        l_value_profile_sd=found.l_profile_sd,
+        equatorial_density_cm3=found.density_m3 / 1e6,
+        equatorial_density_sd_cm3=found.density_sd_m3 / 1e6,
+        equatorial_density_profile_sd_cm3=found.density_profile_sd_m3 / 1e6,
+        l_density_correlation=found.correlation,
+        frequency_low_hz=float(item.trace.frequency_hz.min()),
+        frequency_high_hz=float(item.trace.frequency_hz.max()),
+        snr_db=sighting.snr_db,
+        significance=sighting.significance,
+        fit_rms_s=float(fit.rms_s[number]),
+        uncertainty_status=found.status,
+        flags=_flags(stroke, item, sighting),
+        trace=item.trace,
+        **asdict(_derived(fit, item.path, found, model)),
+    )
 
 
-def _derived(
-    fit: StrokeFit, path: int, found: _PathNumbers, model: FieldLineModel
-) -> dict[str, float]:
-    """One-hop quantities of the fitted model; D0 is well fixed even where L is not."""
+@dataclass(frozen=True)
+class _Derived:
+    """One-hop quantities of a fitted path, under the names of the catalogue."""
+
+    dispersion_s_sqrt_hz: float = NAN
+    nose_frequency_hz: float = NAN
+    nose_time_s: float = NAN
+    equatorial_gyrofrequency_hz: float = NAN
+    tube_content_m2: float = NAN
+
+
+def _derived(fit: StrokeFit, path: int, found: _PathNumbers, model: FieldLineModel) -> _Derived:
+    """Derive from the fitted model; D0 is well fixed even where L is not."""
     l_value, density_m3 = fit.start[path]
     try:
         dispersion = zero_frequency_dispersion(
             l_value, equatorial_density_m3=density_m3, model=model
         )
         if not np.isfinite(found.l_value):
-            return {"dispersion_s_sqrt_hz": dispersion}
-        tip = nose(found.l_value, equatorial_density_m3=found.density_m3, model=model)
-        return {
-            "dispersion_s_sqrt_hz": zero_frequency_dispersion(
-                found.l_value, equatorial_density_m3=found.density_m3, model=model
-            ),
-            "nose_frequency_hz": tip.frequency_hz,
-            "nose_time_s": tip.time_s,
-            "equatorial_gyrofrequency_hz": maximum_frequency(found.l_value, model=model),
-            "tube_content_m2": tube_content(
-                found.l_value, equatorial_density_m3=found.density_m3, model=model
-            ),
-        }
+            return _Derived(dispersion)
+        tip = nose(l_value, equatorial_density_m3=density_m3, model=model)
+        return _Derived(
+            dispersion,
+            tip.frequency_hz,
+            tip.time_s,
+            maximum_frequency(l_value, model=model),
+            tube_content(l_value, equatorial_density_m3=density_m3, model=model),
+        )
     except DomainError:  # a fit that ended on a limit may lie outside a formula's range
-        return {}
+        return _Derived()
 
 
 def _path_numbers(
@@ -201,19 +230,16 @@ def _with_prior(
     settings: Settings,
 ) -> _PathNumbers:
     """Lean on the climatology where the trace alone is too weak, and say so; no sigma then."""
-    prior = Ties(
-        ties.sferic,
-        ties.lightning_time_s,
-        ties.l_value,
-        density_prior_dex=settings.density_prior_sd_dex,
-    )
+    prior = replace(ties, density_prior_dex=settings.density_prior_sd_dex)
     leaning = fit_stroke(
         traces, start=fit.start, lightning_time_s=fit.lightning_time_s, model=model, ties=prior
     )
     if uncertainty_status(leaning, path) != "ok":
         return _PathNumbers()
     l_value, density = leaning.start[path]
-    return _PathNumbers(l_value=l_value, density_m3=density, status="prior-dominated")
+    return _PathNumbers(
+        l_value=l_value, density_m3=density, status="prior-dominated", leaning=leaning
+    )
 
 
 def _flags(stroke: Stroke, item: PathTrace, sighting: Sighting) -> tuple[str, ...]:

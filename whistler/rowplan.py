@@ -25,15 +25,31 @@ class RowPlan:
     band_count: NDArray[np.int64]
 
 
-def plan_rows(bank: Bank, frequency_hz: NDArray[np.float64], frame_s: float) -> RowPlan:
-    """Quantise every template to straight pieces and share the pieces."""
+def plan_rows(bank: Bank, *, frame_s: float) -> RowPlan:
+    """Return every template as straight pieces that templates share.
+
+    Parameters
+    ----------
+    bank : Bank
+        Templates at the spectrogram's channels.
+    frame_s : float
+        Step between the frames whose shifts are counted.
+
+    Returns
+    -------
+    RowPlan
+        Pieces, and which of them each template is made of.
+    """
+    frequency_hz = bank.frequency_hz
     edges = _sub_band_edges(frequency_hz)
     edges_hz = np.append(frequency_hz[edges[:-1]], frequency_hz[-1])
     bands = len(edges) - 1
     row_index = np.zeros((len(bank), bands), np.int64)
     offset = np.zeros((len(bank), bands), np.int64)
     band_count = np.zeros(len(bank), np.int64)
-    first, count, shifts = [], [], []
+    first: list[int] = []
+    count: list[int] = []
+    shifts: list[NDArray[np.int64]] = []
     widest = int(np.diff(edges).max())
     for b in range(bands):
         a, z = edges[b], edges[b + 1]
@@ -72,7 +88,18 @@ def _sub_band_edges(frequency_hz: NDArray[np.float64]) -> NDArray[np.int64]:
 
 
 def row_noise(rows: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
-    """Level and variance of each row's noise, from its lower half: whistlers fill the upper one."""
+    """Return level and variance of each row's noise.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (r, frames), float32
+        Sums along the pieces.
+
+    Returns
+    -------
+    ndarray, shape (r, 1), float32, and ndarray, shape (r,)
+        From the lower half of the values: whistlers fill the upper one.
+    """
     sample = rows[:, :: max(1, rows.shape[1] // 500)]
     low, middle = np.percentile(sample, [15.87, 50.0], axis=1)
     variance = np.maximum(middle - low, 1e-3) ** 2
@@ -81,11 +108,27 @@ def row_noise(rows: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[n
 
 def range_scale(
     variance: NDArray[np.float64],
-    plan: _RowPlan,
+    plan: RowPlan,
+    *,
     starts: NDArray[np.int64],
     ends: NDArray[np.int64],
 ) -> NDArray[np.float32]:
-    """One over the noise sigma of each searched range of each template."""
+    """Return one over the noise sigma of each searched range of each template.
+
+    Parameters
+    ----------
+    variance : ndarray, shape (r,)
+        Of each row.
+    plan : RowPlan
+        Rows of each template.
+    starts, ends : ndarray
+        Sub-bands at which a range may start, and flags of those before which one may end.
+
+    Returns
+    -------
+    ndarray, shape (t, s, b + 1), float32
+        0 where a range is not searched.
+    """
     templates, bands = plan.row_index.shape
     scale = np.zeros((templates, len(starts), bands + 1), np.float32)
     by_band = np.where(np.arange(bands) < plan.band_count[:, None], variance[plan.row_index], 0.0)

@@ -73,7 +73,7 @@ class CurveSearch:
         self._step = max(1, smooth // 2)
         self._excess = self._prepare(np.minimum(spectrogram.power, np.float32(CLIP)), smooth)
         self._pair_s = 2 * self._step * spectrogram.hop_s
-        self._plan = plan_rows(bank, spectrogram.frequency_hz, self._pair_s / 2)
+        self._plan = plan_rows(bank, frame_s=self._pair_s / 2)
         frames = self._excess.shape[2]
         self._rows = np.zeros((len(self._plan.first_channel), frames), np.float32)
         self._best = np.full(frames, -1e9, np.float32)
@@ -84,16 +84,15 @@ class CurveSearch:
         self._sum(0, frames)
         self._level, variance = row_noise(self._rows)
         self._rows -= self._level
-        self._scale = range_scale(variance, self._plan, self._starts, self._ends)
+        self._scale = range_scale(variance, self._plan, starts=self._starts, ends=self._ends)
         self._maximise(0, frames)
 
     def _prepare(self, power: NDArray[np.float32], smooth: int) -> NDArray[np.float32]:
         """Excess over the channel mean, averaged and thinned, split into even and odd frames."""
         if smooth > 1:
-            total = np.cumsum(power, axis=1, dtype=np.float64)
-            total = np.pad(total, ((0, 0), (1, 0)))
-            power = ((total[:, smooth:] - total[:, :-smooth]) / smooth)[:, :: self._step]
-            power = power.astype(np.float32)
+            total = np.pad(np.cumsum(power, axis=1, dtype=np.float64), ((0, 0), (1, 0)))
+            mean = (total[:, smooth:] - total[:, :-smooth]) / smooth
+            power = mean[:, :: self._step].astype(np.float32)
         power = power - power.mean(axis=1, keepdims=True)
         even = power.shape[1] // 2 * 2
         return np.ascontiguousarray(np.stack([power[:, 0:even:2], power[:, 1:even:2]]))

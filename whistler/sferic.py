@@ -141,7 +141,7 @@ class Causes:
 
     def probability(self) -> NDArray[np.float64]:
         """Return the probability of each sferic; what is missing to one is "none"."""
-        return self.odds / (1.0 + self.odds.sum())
+        return np.asarray(self.odds / (1.0 + self.odds.sum()))
 
 
 def possible_causes(catalogue: SfericCatalogue, *, predicted_s: float, sd_s: float) -> Causes:
@@ -166,7 +166,7 @@ def possible_causes(catalogue: SfericCatalogue, *, predicted_s: float, sd_s: flo
     .. math:: odds_k = \frac{1 - p_0}{p_0} \frac{N(t_k; \hat t, \sigma)}{\lambda}
               \frac{f_c(A_k)}{f_b(A_k)}
 
-    with :math:`p_0` the share of unseen causes and lognormal amplitudes, those of causes shifted up.
+    with :math:`p_0` the share of unseen causes, and lognormal amplitudes, larger for causes.
     """
     near = np.flatnonzero(np.abs(catalogue.time_s - predicted_s) <= 4.0 * sd_s)
     time_s = catalogue.time_s[near]
@@ -183,4 +183,4 @@ def _amplitude_ratio(catalogue: SfericCatalogue, index: NDArray[np.int64]) -> ND
     logs = np.log(catalogue.amplitude)
     middle, spread = float(np.mean(logs)), max(float(np.std(logs)), 0.3)
     ratio = CAUSE_STRONGER * (logs[index] - middle - 0.5 * CAUSE_STRONGER) / spread**2
-    return np.exp(np.clip(ratio, -2.5, 2.5))
+    return np.asarray(np.exp(np.clip(ratio, -2.5, 2.5)))

@@ -43,7 +43,7 @@ class Spectrogram:
     @property
     def time_s(self) -> NDArray[np.float64]:
         """Frame centres, shape (frames,), from the recording's first frame."""
-        return self.start_s + self.hop_s * np.arange(self.power.shape[1])
+        return np.asarray(self.start_s + self.hop_s * np.arange(self.power.shape[1]), np.float64)
 
 
 def spectrogram(audio: CleanAudio, *, band_low_hz: float = 300.0) -> Spectrogram:
@@ -63,10 +63,10 @@ def spectrogram(audio: CleanAudio, *, band_low_hz: float = 300.0) -> Spectrogram
 
     Notes
     -----
-    The noise of a channel is a low quantile over the block, divided by that of unit-mean exponential
-    power; each frame is then divided by its own over the channels, which takes out broadband residue:
-    sferic tails, blanked samples, hiss that comes and goes. The quantile lies below the median, so
-    that crowded whistlers do not raise the noise they are measured against.
+    The noise of a channel is a low quantile over the block, divided by that of unit-mean
+    exponential power; each frame is then divided by its own over the channels, which takes out
+    broadband residue: sferic tails, blanked samples, hiss that comes and goes. The quantile lies
+    below the median, so that crowded whistlers do not raise the noise they are measured against.
     """
     rate = audio.sample_rate_hz
     size = 2 * round(WINDOW_S * rate / 2)

@@ -20,6 +20,7 @@ from whistler.spectrogram import Spectrogram
 PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise is measured there
 SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
 NOISE_GAP_S = 0.12
+LEAST_SD_S = 1e-4
 COARSE_S = 0.004  # smoothing under which the speckle of a thick trace runs together
 STACK_CLIP = 20.0
 LEAST_SNR = 6.0  # of a timed sub-band: chance peaks in the window exceed it once in thirty bands
@@ -289,7 +290,8 @@ def _timing_sd(
     """One-sigma of the pulse times: noise, and the speckle of a thick trace."""
     noise_s = TIMING_FACTOR / (band_width_hz * np.sqrt(2.0 * np.maximum(snr, 0.5)))
     speckle = 1.0 + 2.0 * thickness_s * band_width_hz
-    return np.hypot(noise_s * np.sqrt(speckle), thickness_s / np.sqrt(speckle)) + 1e-4
+    sd_s = np.hypot(noise_s * np.sqrt(speckle), thickness_s / np.sqrt(speckle))
+    return np.asarray(sd_s + LEAST_SD_S)
 
 
 def median_snr_db(spectrogram: Spectrogram, trace: Trace, *, curve: Curve) -> float:

@@ -283,14 +283,7 @@ def _write_rows(ax: Axes, rows: Sequence[WhistlerRow]) -> None:
 
 def _views(recording: Recording, settings: Settings) -> Iterable[Spectrogram]:
     for block in recording.blocks(BLOCK_S):
-        audio = clean(
-            block.samples,
-            block.usable,
-            sample_rate_hz=float(recording.sample_rate_hz),
-            start_s=block.first_frame / recording.sample_rate_hz,
-            settings=settings,
-        )
-        yield spectrogram(audio, band_low_hz=settings.band_low_hz)
+        yield spectrogram(clean(block, settings=settings), band_low_hz=settings.band_low_hz)
 
 
 def _head(figure: Figure, recording: Recording, settings: Settings, *, below: str) -> None:

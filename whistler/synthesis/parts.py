@@ -14,7 +14,7 @@ from whistler.errors import Notice, UsageError
 KEYINGS = ("steady", "keyed", "swept")
 
 
-def refuse(part: object, name: str, why: str, next_step: str) -> UsageError:
+def refuse(part: object, name: str, *, why: str, next_step: str) -> UsageError:
     """Return the error for a field of a scene part that cannot be meant.
 
     Parameters
@@ -54,7 +54,9 @@ def check_ranges(part: object, **ranges: tuple[float, float]) -> None:
     for name, (low, high) in ranges.items():
         value = getattr(part, name)
         if value is not None and not low <= value <= high:
-            raise refuse(part, name, f"is outside {low:g} to {high:g}", "correct the scene")
+            raise refuse(
+                part, name, why=f"is outside {low:g} to {high:g}", next_step="correct the scene"
+            )
 
 
 @dataclass(frozen=True)
@@ -117,7 +119,7 @@ class Sferics:
             tweek_db=(-80, 20), start_s=(0, 1e5), duration_s=(0, 1e5),
         )  # fmt: skip
         if self.far_m < self.near_m:
-            raise refuse(self, "far_m", "is below near_m", "swap them")
+            raise refuse(self, "far_m", why="is below near_m", next_step="swap them")
 
 
 @dataclass(frozen=True)
@@ -175,7 +177,7 @@ class Hiss:
         """Check the ranges."""
         check_ranges(self, low_hz=(0, 1e5), high_hz=(0, 1e5), level_db=(-40, 80), modulation=(0, 2))
         if self.high_hz <= self.low_hz:
-            raise refuse(self, "high_hz", "is not above low_hz", "swap them")
+            raise refuse(self, "high_hz", why="is not above low_hz", next_step="swap them")
 
 
 @dataclass(frozen=True)
@@ -242,7 +244,9 @@ class Transmitter:
             span_hz=(-1e5, 1e5),
         )
         if self.keying not in KEYINGS:
-            raise refuse(self, "keying", f"is not one of {', '.join(KEYINGS)}", "choose one")
+            raise refuse(
+                self, "keying", why=f"is not one of {', '.join(KEYINGS)}", next_step="choose one"
+            )
 
 
 @dataclass(frozen=True)

@@ -108,11 +108,16 @@ class Path:
         )  # fmt: skip
         if not self.hops or min(self.hops) < 1 or len({hop % 2 for hop in self.hops}) != 1:
             raise refuse(
-                self, "hops", "must be whole numbers from 1, all odd or all even",
-                "odd hops end in the other hemisphere: put even ones into a stroke of their own",
+                self, "hops", why="must be whole numbers from 1, all odd or all even",
+                next_step="odd hops end in the other hemisphere: put even ones into their own stroke",
             )  # fmt: skip
         if self.frequency_high_hz and self.frequency_high_hz <= self.frequency_low_hz:
-            raise refuse(self, "frequency_high_hz", "is not above frequency_low_hz", "swap them")
+            raise refuse(
+                self,
+                "frequency_high_hz",
+                why="is not above frequency_low_hz",
+                next_step="swap them",
+            )
 
 
 @dataclass(frozen=True)
@@ -145,6 +150,6 @@ class Stroke:
         )
         if len({hop % 2 for path in self.paths for hop in path.hops}) != 1:
             raise refuse(
-                self, "paths", "must be a list with only odd, or only even, hops",
-                "give at least one path, and split odd and even hops over two strokes",
+                self, "paths", why="must be a list with only odd, or only even, hops",
+                next_step="give at least one path, and split odd and even hops over two strokes",
             )  # fmt: skip

@@ -122,9 +122,9 @@ def require_band(path: Path, *, high_hz: float, limit_hz: float) -> None:
         raise refuse(
             path,
             "frequency_high_hz",
-            f"makes the band {path.frequency_low_hz:.0f} to {high_hz:.0f} Hz, but nothing above "
-            f"{limit_hz:.0f} Hz is carried",
-            "lower the band limits or raise the sampling rate",
+            why=f"makes the band {path.frequency_low_hz:.0f} to {high_hz:.0f} Hz, but nothing "
+            f"above {limit_hz:.0f} Hz is carried",
+            next_step="lower the band limits or raise the sampling rate",
         )
 
 
@@ -175,7 +175,7 @@ def hop_wave(
     spectrum = np.zeros(length // 2 + 1, dtype=complex)
     spectrum[bins] = (
         amplitude(ray, frequency)
-        * modulation(ray, frequency, generator, hops=hops)
+        * modulation(ray, frequency, generator=generator, hops=hops)
         * np.exp(-2j * np.pi * (cycles % 1.0))
     )
     return HopWave(first, fft.irfft(spectrum, length) * band.sample_rate_hz)
@@ -204,7 +204,7 @@ def amplitude(ray: Ray, frequency_hz: FloatArray) -> FloatArray:
 
 
 def modulation(
-    ray: Ray, frequency_hz: FloatArray, generator: np.random.Generator, *, hops: int
+    ray: Ray, frequency_hz: FloatArray, *, generator: np.random.Generator, hops: int
 ) -> ComplexArray:
     r"""Return the complex factor of fading and of a duct with many sub-paths.
 
