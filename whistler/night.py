@@ -10,6 +10,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from datetime import datetime
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -77,7 +78,13 @@ class NightResult:
     measured: int
 
 
-def measure_one(path: str, settings: Settings, *, start: datetime | None = None) -> Outcome:
+def measure_one(
+    path: str,
+    settings: Settings,
+    *,
+    start: datetime | None = None,
+    progress: Callable[[float], None] | None = None,
+) -> Outcome:
     """Return the outcome of measuring one recording; no fault of one file stops the others.
 
     Parameters
@@ -88,6 +95,8 @@ def measure_one(path: str, settings: Settings, *, start: datetime | None = None)
         What to measure with.
     start : datetime, optional
         Time of its first frame, UTC.
+    progress : callable, optional
+        Called with the share done, 0 to 1.
 
     Returns
     -------
@@ -99,7 +108,8 @@ def measure_one(path: str, settings: Settings, *, start: datetime | None = None)
         )
         from whistler.measure import measure_recording  # slow to import: only for a usable file
 
-        return Outcome(path, measurement=measure_recording(recording, settings))
+        measurement = measure_recording(recording, settings, progress=progress)
+        return Outcome(path, measurement=measurement)
     except OutputError:
         raise
     except WhistlerError as error:
@@ -118,7 +128,7 @@ def measure_night(
     settings: Settings,
     overwrite: bool = False,
     tell: Tell = lambda notice: None,
-    progress: Callable[[int, int], None] = lambda done, total: None,
+    progress: Callable[[float, float], None] = lambda done, total: None,
 ) -> NightResult:
     """Return what became of a folder of recordings, and leave their catalogue in `out`.
 
@@ -161,7 +171,10 @@ def measure_night(
                 progress(len(done), len(paths))
                 saved = _load(out, path, settings, tell=tell)
                 measured += saved is None
-                done.append(saved or _measure_and_save(out, path, settings, tell=tell))
+                share = partial(_share_done, progress, len(done), len(paths))
+                done.append(
+                    saved or _measure_and_save(out, path, settings, tell=tell, progress=share)
+                )
             progress(len(done), len(paths))
         except Stopped as stop:
             reason = f"stopped with {len(done)} of {len(paths)} recordings done"
@@ -172,6 +185,12 @@ def measure_night(
             refused = tuple(notice for _, notice in done if notice is not None)
             write_catalogue(out, entries, settings=settings, refused=refused)
     return NightResult(entries, refused, measured)
+
+
+def _share_done(
+    progress: Callable[[float, float], None], done: int, total: int, share: float
+) -> None:
+    progress(done + share, total)
 
 
 def _claim(out: Path, *, overwrite: bool) -> None:
@@ -214,11 +233,16 @@ def find_recordings(folder: Path, *, settings: Settings, out: Path) -> list[str]
 
 
 def _measure_and_save(
-    out: Path, path: str, settings: Settings, *, tell: Tell
+    out: Path,
+    path: str,
+    settings: Settings,
+    *,
+    tell: Tell,
+    progress: Callable[[float], None],
 ) -> tuple[Entry | None, Notice | None]:
     """Return entry or refusal of one recording after saving it."""
     key = _key(path, settings)
-    outcome = measure_one(path, settings)
+    outcome = measure_one(path, settings, progress=progress)
     item = entry(outcome.measurement) if outcome.measurement is not None else None
     for notice in outcome.notices:
         tell(notice)

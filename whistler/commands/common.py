@@ -5,7 +5,8 @@ from __future__ import annotations
 import io
 import os
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -141,3 +142,18 @@ def require_hops(hops: int) -> None:
     if not 1 <= hops <= MOST_HOPS:
         reason = f"{hops} is outside 1 to {MOST_HOPS}"
         raise UsageError(Notice("E601", "--hops", reason, "choose a number in that range"))
+
+
+@contextmanager
+def progress_bar(*, quiet: bool) -> Iterator[Callable[[float, float], None]]:
+    """Yield what takes (done, total); a bar on standard error only where a person watches."""
+    if quiet or not sys.stderr.isatty():
+        yield lambda done, total: None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TaskProgressColumn, TimeRemainingColumn
+
+    columns = (BarColumn(), TaskProgressColumn(), TimeRemainingColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("recordings", total=None)
+        yield lambda done, total: bar.update(task, completed=done, total=total)

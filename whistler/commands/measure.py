@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from datetime import datetime
+from functools import partial
 from pathlib import Path, PurePath
 from typing import TYPE_CHECKING, Annotated
 
@@ -82,7 +83,10 @@ class _Run:
 
         try:
             for path in paths:
-                outcome = measure_one(path, self._settings, start=start)
+                with common.progress_bar(quiet=self._tell.quiet) as bar:
+                    outcome = measure_one(
+                        path, self._settings, start=start, progress=partial(bar, total=1.0)
+                    )
                 for notice in outcome.notices:
                     self._tell(notice)
                 if outcome.refusal is not None:
@@ -95,7 +99,7 @@ class _Run:
                 write_catalogue(
                     self._out, self.entries, settings=self._settings, refused=self.refused
                 )
-        if self.entries:
+        if any(item.whistlers for item in self.entries):
             self._print(legend())
 
     def _show(self, measurement: Measurement) -> None:

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import sys
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
 from pathlib import Path
 from typing import Annotated
 
@@ -40,7 +37,7 @@ def night(
     if not folder.is_dir():
         raise UsageError(Notice("E605", str(folder), "not a folder", "name a folder of recordings"))
     tell = common.Reporter(quiet=quiet)
-    with _progress_bar(quiet=quiet) as progress:
+    with common.progress_bar(quiet=quiet) as progress:
         result = measure_night(
             folder, out, settings=settings, overwrite=overwrite, tell=tell, progress=progress
         )
@@ -52,18 +49,3 @@ def night(
         whistlers = sum(len(item.whistlers) for item in result.entries)
         print(f"{len(result.entries)} recordings, {whistlers} whistlers: {out / 'catalogue.csv'}")
     raise typer.Exit(common.exit_code(result.entries, result.refused))
-
-
-@contextmanager
-def _progress_bar(*, quiet: bool) -> Iterator[Callable[[int, int], None]]:
-    """Yield what takes (done, total); a bar on standard error only where a person watches."""
-    if quiet or not sys.stderr.isatty():
-        yield lambda done, total: None
-        return
-    from rich.console import Console
-    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TimeRemainingColumn
-
-    columns = (BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
-        task = bar.add_task("recordings", total=None)
-        yield lambda done, total: bar.update(task, completed=done, total=total)
