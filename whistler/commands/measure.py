@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from datetime import datetime
-from functools import partial
 from pathlib import Path, PurePath
 from typing import TYPE_CHECKING, Annotated
 
@@ -15,6 +14,7 @@ from whistler.errors import Notice, OutputError, UsageError
 if TYPE_CHECKING:
     from whistler.catalogue import Entry
     from whistler.measure import Measurement
+    from whistler.night import Outcome
     from whistler.settings import Settings
 
 
@@ -79,14 +79,10 @@ class _Run:
         """Measure all; whatever stops it, what is done is saved."""
         from whistler.catalogue import entry, write_catalogue
         from whistler.commands.table import legend
-        from whistler.night import measure_one
 
         try:
             for path in paths:
-                with common.progress_bar(quiet=self._tell.quiet) as bar:
-                    outcome = measure_one(
-                        path, self._settings, start=start, progress=partial(bar, total=1.0)
-                    )
+                outcome = self._measure_one(path, start=start)
                 for notice in outcome.notices:
                     self._tell(notice)
                 if outcome.refusal is not None:
@@ -101,6 +97,14 @@ class _Run:
                 )
         if any(item.whistlers for item in self.entries):
             self._print(legend())
+
+    def _measure_one(self, path: str, *, start: datetime | None) -> Outcome:
+        from whistler.night import measure_one
+
+        with common.progress_bar(quiet=self._tell.quiet) as bar:
+            return measure_one(
+                path, self._settings, start=start, progress=lambda share: bar(share, 1.0)
+            )
 
     def _show(self, measurement: Measurement) -> None:
         from whistler.commands.table import recording_table

@@ -109,7 +109,7 @@ class Path:
         if not self.hops or min(self.hops) < 1 or len({hop % 2 for hop in self.hops}) != 1:
             raise refuse(
                 self, "hops", why="must be whole numbers from 1, all odd or all even",
-                next_step="odd hops end in the other hemisphere: put even ones into their own stroke",
+                next_step="odd hops end in the other hemisphere: give even ones their own stroke",
             )  # fmt: skip
         if self.frequency_high_hz and self.frequency_high_hz <= self.frequency_low_hz:
             raise refuse(
