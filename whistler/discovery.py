@@ -44,7 +44,7 @@ class Pass:
     windows_s: tuple[float, ...]
 
 
-THIN = Pass(smooth=1, loss=0.25, width_s=0.012, windows_s=(0.06, 0.03, 0.02))
+THIN = Pass(smooth=1, loss=0.3, width_s=0.012, windows_s=(0.06, 0.03, 0.02))
 THICK = Pass(smooth=16, loss=0.3, width_s=0.064, windows_s=(0.15, 0.12, 0.10))
 
 
