@@ -7,6 +7,9 @@ channels are taken at single-frame precision.
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import Any
+
 import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
@@ -14,7 +17,19 @@ from numpy.typing import NDArray
 CHUNK = 512  # frames a thread works on at a time: the sums stay in the nearest cache
 
 
-@njit(cache=True, parallel=True, fastmath=True)
+def _jit(*, parallel: bool = False) -> Callable[[Callable[..., None]], Any]:
+    """Compile, and keep the result on disk where there is a place for it."""
+
+    def compiled(function: Callable[..., None]) -> Any:
+        try:
+            return njit(cache=True, fastmath=True, parallel=parallel)(function)
+        except RuntimeError:  # a read-only installation and no home folder
+            return njit(fastmath=True, parallel=parallel)(function)
+
+    return compiled
+
+
+@_jit(parallel=True)
 def slope_sums(
     even_odd: NDArray[np.float32],
     first_channel: NDArray[np.int64],
@@ -53,7 +68,7 @@ def slope_sums(
                 row[t] += source[t + whole]
 
 
-@njit(fastmath=True)
+@_jit()
 def _keep_larger(
     total: NDArray[np.float32],
     before: NDArray[np.float32],
@@ -70,7 +85,7 @@ def _keep_larger(
         code[t] = np.int32(mark) if larger else code[t]
 
 
-@njit(cache=True, parallel=True, fastmath=True)
+@_jit(parallel=True)
 def template_maxima(
     rows: NDArray[np.float32],
     row_index: NDArray[np.int64],
