@@ -165,7 +165,8 @@ def _remove_mains(spectrum: NDArray[np.complex64], bin_hz: float, nominal_hz: fl
     floor = (
         ndimage.percentile_filter(power[::2], 40, width // 2) / 0.51
     )  # mean of exponential power
-    floor = np.repeat(floor, 2)[:top] + np.finfo(np.float32).tiny
+    # Below the pass band there is nothing: a floor far below any line keeps the ratio finite.
+    floor = np.repeat(floor, 2)[:top] + 1e-12 * power.max() + np.finfo(np.float32).tiny
     excess = power / floor
     harmonics = np.arange(4, int(HUM_TOP_HZ / nominal_hz) + 1)
     trials_hz = nominal_hz * (1.0 + np.linspace(-HUM_TOLERANCE, HUM_TOLERANCE, 81))

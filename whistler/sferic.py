@@ -13,6 +13,7 @@ from fieldlines.constants import SPEED_OF_LIGHT_M_S
 MARK_SIGMA = 4.0
 LOCAL_S = 0.012  # a sferic is over within it; a whistler, at any frequency, is not
 GUARD_S = 0.001
+FRONT_SHARE = 0.05  # of the peak: what is weaker ahead of it is ringing of the zero-phase filters
 
 
 @dataclass(frozen=True)
@@ -68,8 +69,10 @@ def catalogue_sferics(
     marked = np.asarray(ndimage.maximum_filter1d(loud, 2 * guard + 1))
     starts = np.flatnonzero(np.diff(marked.astype(np.int8), prepend=0) == 1)
     stops = np.flatnonzero(np.diff(marked.astype(np.int8), append=0) == -1) + 1
-    amplitude = np.array([strength[a:b].max() for a, b in zip(starts, stops, strict=True)])
-    time_s = np.where(starts > 0, starts + guard, np.argmax(loud)) / sample_rate_hz
+    parts = [strength[a:b] * loud[a:b] for a, b in zip(starts, stops, strict=True)]
+    amplitude = np.array([part.max() for part in parts])
+    lead = [int(np.argmax(part > FRONT_SHARE * part.max())) for part in parts]
+    time_s = (starts + np.array(lead, int)) / sample_rate_hz
     catalogue = SfericCatalogue(time_s, amplitude, len(whitened) / sample_rate_hz)
     return catalogue, marked
 
