@@ -100,7 +100,7 @@ def clean(block: AudioBlock, *, settings: Settings) -> CleanAudio:
     start_s = block.first_frame / block.sample_rate_hz
     audio, mains_hz = _band_limit(block.samples, plan, settings)
     missing = _missing_at(block.usable, len(audio), plan)
-    whitened = _whiten(audio, plan.rate_hz, settings)
+    whitened = _whiten(audio, ~missing, plan.rate_hz, settings)
     sferics, marked = catalogue_sferics(whitened, sample_rate_hz=plan.rate_hz)
     blanked = marked | missing
     quiet = np.where(blanked, np.float32(0.0), whitened).astype(np.float32)
@@ -194,10 +194,12 @@ def _missing_at(usable: NDArray[np.bool_], length: int, plan: _BandPlan) -> NDAr
     return missing
 
 
-def _whiten(audio: NDArray[np.float32], rate_hz: float, settings: Settings) -> NDArray[np.float32]:
+def _whiten(
+    audio: NDArray[np.float32], present: NDArray[np.bool_], rate_hz: float, settings: Settings
+) -> NDArray[np.float32]:
     """Flatten the median spectrum with a zero-phase filter and scale to unit robust sigma."""
     size = 2 * round(WHITENING_WINDOW_S * rate_hz / 2)
-    level = _median_level(audio, size)
+    level = _median_level(audio, present, size)
     frequency_hz = np.arange(len(level)) * rate_hz / size
     inside = (frequency_hz >= 300.0) & (frequency_hz <= _top_hz(rate_hz, settings))
     if not inside.any() or not level[inside].max() > 0.0:
@@ -209,16 +211,24 @@ def _whiten(audio: NDArray[np.float32], rate_hz: float, settings: Settings) -> N
     grid = np.arange(total // 2 + 1) * (len(level) - 1) / (total // 2)
     response = np.interp(grid, np.arange(len(level)), gain).astype(np.float32)
     white = fft.irfft(fft.rfft(audio, total) * response, total)[: len(audio)]
-    heard = np.abs(white[white != 0.0][::7])
+    heard = np.abs(white[present & (white != 0.0)][::7])
     sigma = float(np.median(heard)) / 0.6745 if len(heard) else 0.0
     return np.asarray(white / sigma if sigma > 0.0 else white * 0.0, np.float32)
 
 
-def _median_level(audio: NDArray[np.float32], size: int) -> NDArray[np.float64]:
-    """Median power in each channel over the frames that hold any signal."""
+def _median_level(
+    audio: NDArray[np.float32], present: NDArray[np.bool_], size: int
+) -> NDArray[np.float64]:
+    """Median power in each channel over the frames that are there as a whole and hold a signal."""
     if len(audio) < size:
-        audio = np.pad(audio, (0, size - len(audio)))
-    frames = np.lib.stride_tricks.sliding_window_view(audio, size)[:: size // 2]
+        audio, present = (np.pad(part, (0, size - len(part))) for part in (audio, present))
+    frames, whole = (
+        np.lib.stride_tricks.sliding_window_view(part, size)[:: size // 2]
+        for part in (audio, present)
+    )
+    whole = whole.all(axis=1)
+    if whole.any():
+        frames = frames[whole]
     if len(frames) > 4000:  # enough for a median to 2 %; keeps long blocks cheap
         frames = frames[:: len(frames) // 4000 + 1]
     power = np.abs(fft.rfft(frames * _periodic_hann(size), axis=1)) ** 2

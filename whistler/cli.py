@@ -26,7 +26,7 @@ USAGE_ERROR = typer.BadParameter.__mro__[1]  # the class of every parsing error,
 app = typer.Typer(
     name="whistler",
     add_completion=False,
-    no_args_is_help=True,
+    no_args_is_help=False,  # it would come as an error message of twenty lines
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80},
@@ -120,5 +120,5 @@ def _usage_notice(error: Exception) -> Notice:
     context = getattr(error, "ctx", None)
     command = context.command_path if context is not None else "whistler"
     shown = getattr(error, "format_message", lambda: str(error))()
-    reason = " ".join(str(shown).split()).rstrip(".") or "no command given"
+    reason = " ".join(str(shown).split()).rstrip(".")
     return Notice("E605", command, reason, f"see '{command} --help'")

@@ -19,6 +19,7 @@ from fieldlines.errors import FloatArray
 from whistler.problem import FREE, TIME_UNIT_S, PathTrace, StrokeProblem, Ties
 
 ROBUST_SCALE = 3.0
+TOLERANCE = 1e-7  # looser stops half-way along the ridge of L and density
 OUTLIER_SIGMA = 4.5
 SMALL_SAMPLE = 1.5  # a misfit known from few points is itself uncertain (as Student's t allows for)
 LEAST_POINTS = 4  # that a trace must keep when outliers are dropped
@@ -77,6 +78,7 @@ def fit_stroke(
     lightning_time_s: float,
     model: FieldLineModel,
     ties: Ties = FREE,
+    robust: bool = True,
     final: bool = True,
 ) -> StrokeFit:
     """Return L and density of every path of a stroke, and its time.
@@ -93,8 +95,11 @@ def fit_stroke(
         Field, profile and ions.
     ties : Ties
         What else is known; by default the time is free.
+    robust : bool
+        Whether to begin with a pass that outliers sway little, and then drop them; not needed for
+        points that have been through it.
     final : bool
-        Whether to finish with outliers dropped; a robust pass alone is enough for a guess.
+        Whether to finish with plain least squares; a robust pass alone is enough for a guess.
 
     Returns
     -------
@@ -105,10 +110,15 @@ def fit_stroke(
     low, high = problem.limits()
     x = np.append(np.log(np.array(start)).ravel(), np.zeros(1 + len(traces)))
     x = np.clip(x, low + 1e-6, high - 1e-6)
-    found = _solve(problem, x, (low, high), loss="soft_l1", tolerance=1e-4)
-    if final:
-        _drop_outliers(problem, found.x)
-        found = _solve(problem, found.x, (low, high), loss="linear", tolerance=1e-7)
+    limits = (low, high)
+    found = None
+    if robust:
+        found = _solve(problem, x, limits, loss="soft_l1")
+        x = found.x
+    if found is None or final:
+        if robust:
+            _drop_outliers(problem, x)
+        found = _solve(problem, x, limits, loss="linear")
     return _summary(problem, found.x, bool(found.success), low, high)
 
 
@@ -118,7 +128,6 @@ def _solve(
     bounds: tuple[FloatArray, FloatArray],
     *,
     loss: str,
-    tolerance: float,
 ) -> OptimizeResult:
     return least_squares(
         problem.residual,
@@ -128,9 +137,9 @@ def _solve(
         loss=loss,
         f_scale=ROBUST_SCALE,
         x_scale="jac",
-        ftol=tolerance,
-        xtol=tolerance,
-        gtol=tolerance,
+        ftol=TOLERANCE,
+        xtol=TOLERANCE,
+        gtol=TOLERANCE,
         max_nfev=60,
     )
 

@@ -156,7 +156,7 @@ def _read_hops(
             start=[(item.l_value, density)],
             lightning_time_s=item.lightning_time_s,
             model=model,
-            final=False,
+            robust=False,
         )
         readings[hops] = _weigh(fit, hops, sferics, settings)
     return readings

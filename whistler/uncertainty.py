@@ -57,7 +57,7 @@ def profile_covariance(
                 lightning_time_s=fit.lightning_time_s,
                 model=varied,
                 ties=tie,
-                final=False,
+                robust=False,
             )
             for varied, tie in (low, high)
         ]

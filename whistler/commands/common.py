@@ -24,22 +24,25 @@ MOST_HOPS = 20
 INTERNAL_CODE = "E701"
 
 StationOption = Annotated[
-    Path | None, typer.Option("--station", metavar="FILE.toml", help="Description of the station.")
+    Path | None,
+    typer.Option(
+        "--station", metavar="FILE.toml", help="Station file; its keys are in the README."
+    ),
 ]
 StartOption = Annotated[
     str | None,
-    typer.Option("--start", metavar="ISO8601", help="Time of the first sample (UTC)."),
+    typer.Option("--start", metavar="ISO8601", help="Time of the first sample, UTC."),
 ]
 OutOption = Annotated[
     Path | None, typer.Option("--out", metavar="DIR", help="Folder for catalogue and figures.")
 ]
-JsonOption = Annotated[bool, typer.Option("--json", help="Print one JSON document.")]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print one JSON document, no table.")]
 QuietOption = Annotated[bool, typer.Option("--quiet", "-q", help="Only errors on stderr.")]
 VerboseOption = Annotated[
-    bool, typer.Option("--verbose", "-v", help="Show the traceback of an internal fault.")
+    bool, typer.Option("--verbose", "-v", help="Show the traceback of an error.")
 ]
 ChannelOption = Annotated[
-    str, typer.Option("--channel", metavar="N|NAME|mean", help="Channel to measure.")
+    str, typer.Option("--channel", metavar="N|NAME|mean", help="Number from 1, name, or the mean.")
 ]
 FalseAlarmsOption = Annotated[
     float, typer.Option("--false-alarms", metavar="RATE", help="False alarms allowed per hour.")

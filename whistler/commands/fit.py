@@ -8,30 +8,39 @@ from typing import Annotated
 import typer
 
 from whistler.commands import common
+from whistler.errors import printable
 
 
 def fit(
     picks: Annotated[
-        Path, typer.Argument(metavar="PICKS.csv", help="frequency_hz,time_s[,time_sd_s][,trace]")
+        Path,
+        typer.Argument(
+            metavar="PICKS.csv", help="Columns frequency_hz,time_s[,time_sd_s][,trace]."
+        ),
     ],
     hops: Annotated[int, typer.Option("--hops", metavar="N", help="Field-line crossings.")] = 1,
     sferic_time: Annotated[
-        float | None, typer.Option("--sferic-time", metavar="S", help="Causative sferic, s.")
+        float | None,
+        typer.Option("--sferic-time", metavar="S", help="Causative sferic at the receiver, s."),
     ] = None,
     sferic_time_sd: Annotated[
-        float, typer.Option("--sferic-time-sd", metavar="S", help="One-sigma of it, s.")
+        float, typer.Option("--sferic-time-sd", metavar="S", help="One-sigma of --sferic-time, s.")
     ] = 0.002,
     lightning_time: Annotated[
-        float | None, typer.Option("--lightning-time", metavar="S", help="Lightning itself, s.")
+        float | None,
+        typer.Option("--lightning-time", metavar="S", help="Time of the stroke itself, s."),
     ] = None,
     l_value: Annotated[
-        float | None, typer.Option("--l-value", metavar="L", help="Fit the density for this L.")
+        float | None,
+        typer.Option("--l-value", metavar="L", help="Hold L at this; fit the density."),
     ] = None,
     date: Annotated[
-        str | None, typer.Option("--date", metavar="ISO8601", help="Time zero of the picks (UTC).")
+        str | None, typer.Option("--date", metavar="ISO8601", help="UTC of time zero of the picks.")
     ] = None,
     station: common.StationOption = None,
-    out: common.OutOption = None,
+    out: Annotated[
+        Path | None, typer.Option("--out", metavar="DIR", help="Folder for the catalogue.")
+    ] = None,
     json: common.JsonOption = False,
     overwrite: common.OverwriteOption = False,
     quiet: common.QuietOption = False,
@@ -39,7 +48,9 @@ def fit(
 ) -> None:
     """Fit L, density and lightning time to hand-picked points.
 
-    Times count from one common zero. Traces of one file are taken as paths of one stroke.
+    Times count from one common zero. Traces of one file are taken as paths of one stroke. Without
+    time_sd_s a point counts as good to 5 ms; without --sferic-time or --lightning-time the time of
+    the stroke is fitted too.
     """
     from whistler.catalogue import (
         document,
@@ -78,3 +89,5 @@ def fit(
     else:
         print(rows_table(rows))
         print(f"\n{legend()}")
+        if out is not None:
+            print(f"\nsaved in {printable(str(out))}: catalogue.csv")

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from whistler.commands import common
-from whistler.errors import Notice, OutputError, UsageError
+from whistler.errors import Notice, OutputError, UsageError, printable
 
 if TYPE_CHECKING:
     from whistler.catalogue import Entry
@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 def measure(
     recordings: Annotated[
-        list[str], typer.Argument(metavar="RECORDING...", help="Audio files to measure.")
+        list[str], typer.Argument(metavar="RECORDING", help="Audio files to measure.")
     ],
     station: common.StationOption = None,
     start: common.StartOption = None,
@@ -38,7 +38,7 @@ def measure(
 
     Prints a table, or one JSON document with --json. With --out the folder gets catalogue.csv, its
     description catalogue.csv.meta.json, catalogue.jsonl with the traces, run.json and a figure of
-    each recording.
+    each recording. Times, units and columns are explained in the README.
     """
     from whistler.catalogue import document, json_text, prepare_output
     from whistler.clock import parse_time
@@ -97,6 +97,12 @@ class _Run:
                 )
         if any(item.whistlers for item in self.entries):
             self._print(legend())
+        if self._out is not None:
+            self._print(f"\nsaved in {printable(str(self._out))}: {self._saved()}")
+
+    def _saved(self) -> str:
+        drawn = len(self.entries) - len(self.faults) if self._figures else 0
+        return f"catalogue.csv, {drawn} figure{'' if drawn == 1 else 's'}"
 
     def _measure_one(self, path: str, *, start: datetime | None) -> Outcome:
         from whistler.night import measure_one

@@ -17,13 +17,16 @@ def predict(
         float, typer.Option("--density", metavar="CM3", help="Equatorial density, cm^-3.")
     ],
     alpha: Annotated[
-        float, typer.Option("--alpha", help="Exponent of density along the line.")
+        float, typer.Option("--alpha", metavar="A", help="Density along the line goes as r^-A.")
     ] = 1.0,
     date: Annotated[
-        str, typer.Option("--date", metavar="ISO8601", help="Date of the Earth's field.")
+        str, typer.Option("--date", metavar="ISO8601", help="Date of the Earth's field, UTC.")
     ] = "2025-01-01",
     frequencies: Annotated[
-        str | None, typer.Option("--frequencies", metavar="HZ,HZ,...", help="Frequencies, Hz.")
+        str | None,
+        typer.Option(
+            "--frequencies", metavar="HZ,HZ,...", help="In place of every 500 Hz up to 10 kHz."
+        ),
     ] = None,
     hops: Annotated[int, typer.Option("--hops", metavar="N", help="Field-line crossings.")] = 1,
     figure: Annotated[
@@ -34,7 +37,10 @@ def predict(
     quiet: common.QuietOption = False,
     verbose: common.VerboseOption = False,
 ) -> None:
-    """Predict travel time against frequency for given L and density."""
+    """Predict travel time against frequency for given L and density.
+
+    Times count from the lightning. Nose, dispersion and tube content are of one hop.
+    """
     from whistler import prediction
     from whistler.catalogue import SCHEMA, json_text
     from whistler.clock import decimal_year, parse_time

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 def synthesize(
     out: Annotated[Path, typer.Option("--out", metavar="DIR", help="Folder for the recordings.")],
     scenes: Annotated[
-        list[Path] | None, typer.Argument(metavar="[SCENE.toml]...", help="Scene files.")
+        list[Path] | None, typer.Argument(metavar="SCENE.toml", help="Scene files.")
     ] = None,
     l_value: Annotated[
         float | None, typer.Option("--l", metavar="L", help="L of the path, without scene file.")
@@ -28,15 +28,21 @@ def synthesize(
     hops: Annotated[
         str, typer.Option("--hops", metavar="N[,N...]", help="Crossings, all odd or all even.")
     ] = "1",
-    snr: Annotated[float, typer.Option("--snr", metavar="DB", help="Cell SNR, dB.")] = 12.0,
-    duration: Annotated[float, typer.Option("--duration", metavar="S", help="Length, s.")] = 30.0,
+    snr: Annotated[
+        float, typer.Option("--snr", metavar="DB", help="Power over noise in a 21 ms cell, dB.")
+    ] = 12.0,
+    duration: Annotated[
+        float, typer.Option("--duration", metavar="S", help="Length of the recording, s.")
+    ] = 30.0,
     sferic_rate: Annotated[
         float, typer.Option("--sferic-rate", metavar="HZ", help="Background sferics a second.")
     ] = 20.0,
     sample_rate: Annotated[
         int, typer.Option("--sample-rate", metavar="HZ", help="Sampling rate, Hz.")
     ] = 48_000,
-    seed: Annotated[int, typer.Option("--seed", metavar="N", help="Seed.")] = 1,
+    seed: Annotated[
+        int, typer.Option("--seed", metavar="N", help="Seed of everything random.")
+    ] = 1,
     json: common.JsonOption = False,
     overwrite: Annotated[
         bool, typer.Option("--overwrite", help="Replace files that hold something else.")
@@ -44,11 +50,11 @@ def synthesize(
     quiet: common.QuietOption = False,
     verbose: common.VerboseOption = False,
 ) -> None:
-    """Write recordings with known truth: NAME.flac and NAME.truth.json.
+    """Write synthetic recordings with known truth.
 
-    Takes scene files (NAME.scene.toml), or --l and --density for one whistler in an ordinary
-    background. The same scene gives the same files. --json prints the truth document, or for
-    several scenes one document with all of them.
+    Each is NAME.flac with NAME.truth.json. Takes scene files (NAME.scene.toml), or --l and
+    --density for one whistler in an ordinary background. The same scene gives the same files.
+    --json prints the truth document, or for several scenes one document with all of them.
     """
     from whistler.synthesis.files import summary, truth_document, write_recordings
     from whistler.synthesis.quick import parse_hops, quick_scene
