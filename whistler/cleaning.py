@@ -221,12 +221,10 @@ def _median_level(
 ) -> NDArray[np.float64]:
     """Median power in each channel over the frames that are there as a whole and hold a signal."""
     if len(audio) < size:
-        audio, present = (np.pad(part, (0, size - len(part))) for part in (audio, present))
-    frames, whole = (
-        np.lib.stride_tricks.sliding_window_view(part, size)[:: size // 2]
-        for part in (audio, present)
-    )
-    whole = whole.all(axis=1)
+        lacking = (0, size - len(audio))
+        audio, present = np.pad(audio, lacking), np.pad(present, lacking)
+    frames = np.lib.stride_tricks.sliding_window_view(audio, size)[:: size // 2]
+    whole = np.lib.stride_tricks.sliding_window_view(present, size)[:: size // 2].all(axis=1)
     if whole.any():
         frames = frames[whole]
     if len(frames) > 4000:  # enough for a median to 2 %; keeps long blocks cheap
