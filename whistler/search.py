@@ -71,7 +71,9 @@ class CurveSearch:
         self.spectrogram = spectrogram
         self.bank = bank
         self._step = max(1, smooth // 2)
-        self._excess = self._prepare(np.minimum(spectrogram.power, np.float32(CLIP)), smooth)
+        self._excess, self._heard = self._prepare(
+            np.minimum(spectrogram.power, np.float32(CLIP)), smooth
+        )
         self._pair_s = 2 * self._step * spectrogram.hop_s
         self._plan = plan_rows(bank, frame_s=self._pair_s / 2)
         frames = self._excess.shape[2]
@@ -82,20 +84,31 @@ class CurveSearch:
         self._stale_rows: list[tuple[int, int]] = []
         self._stale_sums: list[tuple[int, int]] = []
         self._sum(0, frames)
-        self._level, variance = row_noise(self._rows)
+        self._level, variance = row_noise(self._rows[:, self._heard])
         self._rows -= self._level
         self._scale = range_scale(variance, self._plan, starts=self._starts, ends=self._ends)
         self._maximise(0, frames)
 
-    def _prepare(self, power: NDArray[np.float32], smooth: int) -> NDArray[np.float32]:
-        """Excess over the channel mean, averaged and thinned, split into even and odd frames."""
+    def _prepare(
+        self, power: NDArray[np.float32], smooth: int
+    ) -> tuple[NDArray[np.float32], NDArray[np.bool_]]:
+        """Excess over the channel mean, averaged and thinned, split into even and odd frames.
+
+        Frames without any power, from silence or samples that are not numbers, say nothing about
+        the noise: they hold no excess, and the second array is False at pairs of them.
+        """
         if smooth > 1:
             total = np.pad(np.cumsum(power, axis=1, dtype=np.float64), ((0, 0), (1, 0)))
             mean = (total[:, smooth:] - total[:, :-smooth]) / smooth
             power = mean[:, :: self._step].astype(np.float32)
-        power = power - power.mean(axis=1, keepdims=True)
         even = power.shape[1] // 2 * 2
-        return np.ascontiguousarray(np.stack([power[:, 0:even:2], power[:, 1:even:2]]))
+        power = power[:, :even]
+        heard = power.max(axis=0) > 0.0
+        if not heard.any():
+            heard[:] = True
+        power = np.where(heard, power - power[:, heard].mean(axis=1, keepdims=True), 0.0)
+        halves = np.stack([power[:, 0::2], power[:, 1::2]]).astype(np.float32)
+        return np.ascontiguousarray(halves), heard[0::2] | heard[1::2]
 
     @property
     def _origin_s(self) -> float:
@@ -165,7 +178,7 @@ class CurveSearch:
             0,
             frames,
         )
-        law = chance_law(best, frame_s=self._pair_s)
+        law = chance_law(best[self._heard[::-1]], frame_s=self._pair_s)
         # A whole bank has more chances than every third curve of it; as if they were independent.
         return replace(law, location=law.location + law.scale * float(np.log(NULL_STRIDE)))
 
