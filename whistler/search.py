@@ -164,6 +164,7 @@ class CurveSearch:
         rows = np.zeros_like(self._rows)
         mirrored = np.ascontiguousarray(self._excess[::-1, :, ::-1])
         slope_sums(mirrored, plan.first_channel, plan.channel_count, plan.shift, rows, 0, frames)
+        rows -= self._level
         best = np.full(frames, -1e9, np.float32)
         template_maxima(
             rows,
