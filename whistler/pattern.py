@@ -23,8 +23,8 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
-CENTRE_SD = 0.65  # cells of a pattern are not all alike; measured on synthetic ducts
-LAG_SD = 0.34  # in units of one over the band width; measured on synthetic ducts
+CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
+LAG_SD = 0.3  # in units of one over the band width; measured on synthetic ducts
 
 
 @dataclass(frozen=True)

@@ -16,6 +16,7 @@ from whistler.spectrogram import Spectrogram
 CLIP = 5.0  # times the mean noise power; costs 0.03 dB in noise and takes the rest of the sferics
 RANGE_STARTS_HZ = (0.0, 1200.0)
 RANGE_ENDS_HZ = (3600.0, 6200.0)
+LARGEST_SHARE = 0.5  # of the power that one sub-band may hold
 SUM_REACH_S = 1.2  # around a peeled ridge: curves that pass farther off share little with it
 ROW_REACH_S = 0.5
 NULL_STRIDE = 3  # every third template serves for the reversed recording
@@ -194,13 +195,28 @@ class CurveSearch:
                 kept.append(int(at))
         return kept
 
-    def candidate(self, at: int) -> Candidate:
-        """Return the trace whose sum peaks at frame pair `at`."""
+    def candidate(self, at: int, *, threshold: float) -> Candidate | None:
+        """Return the trace whose sum peaks at frame pair `at`.
+
+        Parameters
+        ----------
+        at : int
+            From :meth:`peaks`.
+        threshold : float
+            Least sum; sums far from a peeled ridge are not made again until they are asked for here.
+
+        Returns
+        -------
+        Candidate or None
+            None when peeling has taken the power away, or one sub-band holds nearly all of it.
+        """
         code = int(self._which[at])
         template, start = divmod(code, len(self._starts))
-        strength = float(self._best[at])
         first = int(self._starts[start])
-        last = self._best_end(template, first, at)
+        last, strength, share = self._best_end(template, first, at)
+        if strength < threshold or share > LARGEST_SHARE:
+            self._best[at] = min(strength, threshold - 1.0)
+            return None
         edges = self._plan.edges_hz
         return self._describe(
             template,
@@ -209,7 +225,7 @@ class CurveSearch:
             strength,
         )
 
-    def _best_end(self, template: int, first: int, at: int) -> int:
+    def _best_end(self, template: int, first: int, at: int) -> tuple[int, float, float]:
         plan = self._plan
         count = int(plan.band_count[template])
         at_rows = at + plan.offset[template, :count]
@@ -222,7 +238,10 @@ class CurveSearch:
         ends = [b for b in range(first + 1, count + 1) if self._ends[b] or b == count]
         start = int(np.flatnonzero(self._starts == first)[0])
         scores = [value[first:b].sum() * self._scale[template, start, b] for b in ends]
-        return ends[int(np.argmax(scores))]
+        best = int(np.argmax(scores))
+        used = value[first : ends[best]]
+        share = float(used.max() / max(used.sum(), 1e-6))
+        return ends[best], float(scores[best]), share
 
     def _describe(
         self,
