@@ -188,7 +188,7 @@ def _half_width_s(
 ) -> NDArray[np.float64]:
     """Half the time a trace fills in each channel: its own cell, the window, its thickness."""
     slope = np.abs(np.gradient(curve_s, frequency_hz))
-    return 0.018 + 0.9 * np.sqrt(slope) + 45.0 * slope + 3.0 * thickness_s
+    return 0.014 + 0.7 * np.sqrt(slope) + 40.0 * slope + 2.0 * thickness_s
 
 
 def _erase(spectrogram: Spectrogram, detection: Detection, model: FieldLineModel) -> None:
