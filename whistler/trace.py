@@ -20,6 +20,8 @@ from whistler.spectrogram import Spectrogram
 PULSE_LEAD_S = 0.35  # audio kept before and after the de-dispersed pulse: noise is measured there
 SUB_BAND_HZ = 400.0  # spacing of the sub-bands; their Hann passbands are twice as wide
 NOISE_GAP_S = 0.12
+FEWEST_SUB_BANDS = 4
+EDGE_S = 0.03  # kept clear at the ends of the audio
 LEAST_SD_S = 1e-4
 COARSE_S = 0.004  # smoothing under which the speckle of a thick trace runs together
 STACK_CLIP = 20.0
@@ -97,7 +99,7 @@ def straighten(
     Returns
     -------
     Straightened or None
-        None when the curve lies outside the block.
+        None when too little of the curve lies inside the block.
 
     Notes
     -----
@@ -120,10 +122,22 @@ def straighten(
     delay_s = np.interp(frequency_hz, grid_hz, arrival_s) - origin_s - 0.5
     phase = 2 * np.pi * np.cumsum(delay_s) * (frequency_hz[1] - frequency_hz[0])
     spectrum = spectrum * np.exp(1j * phase)
-    centres_hz = _centres(low_hz, high_hz, spacing_hz)
+    centres_hz = _whole(audio, curve, _centres(low_hz, high_hz, spacing_hz), spacing_hz)
+    if len(centres_hz) < FEWEST_SUB_BANDS:
+        return None
     return _envelopes(
         spectrum, frequency_hz, centres_hz, spacing_hz, reach_s, audio.sample_rate_hz, size
     )
+
+
+def _whole(
+    audio: CleanAudio, curve: Curve, centres_hz: NDArray[np.float64], spacing_hz: float
+) -> NDArray[np.float64]:
+    """Leave out sub-bands that the ends of the audio cut: their remains would be mistimed."""
+    end_s = audio.start_s + len(audio.samples) / audio.sample_rate_hz
+    low_s, high_s = (curve(np.maximum(centres_hz + k * spacing_hz, 100.0)) for k in (-0.8, 0.8))
+    first_s, last_s = np.minimum(low_s, high_s), np.maximum(low_s, high_s)
+    return centres_hz[(first_s > audio.start_s + EDGE_S) & (last_s < end_s - EDGE_S)]
 
 
 def _centres(low_hz: float, high_hz: float, spacing_hz: float) -> NDArray[np.float64]:
