@@ -21,7 +21,7 @@ from whistler.group import Stroke, predicted_sferic
 from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN, WhistlerRow
 from whistler.settings import Settings
-from whistler.uncertainty import profile_covariance, uncertainty_status
+from whistler.uncertainty import LEANING, profile_covariance, uncertainty_status
 
 DIFFUSE_S = 0.010  # thickness from which a trace is called diffuse
 AMBIGUOUS = 0.5  # probability of the likeliest sferic from which a doubt is worth a flag
@@ -234,7 +234,7 @@ def _with_prior(
     leaning = fit_stroke(
         traces, start=fit.start, lightning_time_s=fit.lightning_time_s, model=model, ties=prior
     )
-    if uncertainty_status(leaning, path) != "ok":
+    if uncertainty_status(leaning, path, width=LEANING) != "ok":
         return _PathNumbers()
     l_value, density = leaning.start[path]
     return _PathNumbers(

@@ -14,8 +14,12 @@ from whistler.fit import StrokeFit, fit_stroke
 from whistler.problem import PathTrace, Ties
 from whistler.settings import Settings
 
-UNDETERMINED_LOG_L = 0.10  # one-sigma of ln L beyond which an L is not worth printing
-UNDETERMINED_LOG_DENSITY = 0.5
+# One-sigmas of ln L and ln density beyond which the numbers are not those of the trace. Where a
+# trace says so little, sigma itself depends on where along the valley of good fits the noise put L,
+# and the smallest ones come with the largest errors: what is let through must lie well below.
+UNDETERMINED_LOG_L = 0.05
+UNDETERMINED_LOG_DENSITY = 0.3
+LEANING = 2.0  # a fit that leans on the density prior may be so many times as wide
 
 
 def profile_covariance(
@@ -104,11 +108,20 @@ def _shifted(layer: ChapmanLayer, name: str, by: float) -> ChapmanLayer:
     return replace(layer, **{name: max(getattr(layer, name) + by, 1e5)})
 
 
-def uncertainty_status(fit: StrokeFit, path: int) -> str:
-    """Return ``ok``, ``at-bound`` or ``undetermined`` for one path of a fit."""
+def uncertainty_status(fit: StrokeFit, path: int, *, width: float = 1.0) -> str:
+    """Return ``ok``, ``at-bound`` or ``undetermined`` for one path of a fit.
+
+    Parameters
+    ----------
+    fit : StrokeFit
+        The fit.
+    path : int
+        Index of the path.
+    width : float
+        Factor on the sigmas from which a number counts as undetermined.
+    """
     if fit.at_bound[path]:
         return "at-bound"
     sd = np.sqrt(np.diag(fit.covariance)[2 * path : 2 * path + 2])
-    if not np.isfinite(sd).all() or sd[0] > UNDETERMINED_LOG_L or sd[1] > UNDETERMINED_LOG_DENSITY:
-        return "undetermined"
-    return "ok"
+    limits = width * np.array([UNDETERMINED_LOG_L, UNDETERMINED_LOG_DENSITY])
+    return "ok" if np.isfinite(sd).all() and np.all(sd <= limits) else "undetermined"
