@@ -60,6 +60,7 @@ WHISTLER_ORDER = [
     "uncertainty",
     "follow",
     "discovery",
+    "evidence",
     "group",
     "rows",
     "results",

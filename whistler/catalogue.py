@@ -294,11 +294,12 @@ def prepare_output(
 
 
 def _same_run(path: Path, paths: Sequence[str], settings: Settings) -> bool:
-    """Whether a run record is of the same recordings and settings."""
+    """Whether a run record is of the same settings and of no other recordings."""
     try:
         record = json.loads(path.read_bytes())
         before = [item["path"] for item in [*record["inputs"], *record["refused"]]]
-        return sorted(before) == sorted(set(paths)) and record["settings"] == settings.to_dict()
+        known = json.loads(json_text(settings.to_dict()))
+        return set(before) <= set(paths) and record["settings"] == known
     except (OSError, ValueError, KeyError, TypeError):
         return False
 

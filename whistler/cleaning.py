@@ -101,7 +101,11 @@ def clean(block: AudioBlock, *, settings: Settings) -> CleanAudio:
     audio, mains_hz = _band_limit(block.samples, plan, settings)
     missing = _missing_at(block.usable, len(audio), plan)
     whitened = _whiten(audio, ~missing, plan.rate_hz, settings)
-    sferics, marked = catalogue_sferics(whitened, sample_rate_hz=plan.rate_hz)
+    sferics, marked = catalogue_sferics(
+        whitened,
+        sample_rate_hz=plan.rate_hz,
+        front_hz=1.1 * _top_hz(plan.rate_hz, settings),
+    )
     blanked = marked | missing
     quiet = np.where(blanked, np.float32(0.0), whitened).astype(np.float32)
     return CleanAudio(

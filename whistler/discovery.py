@@ -112,7 +112,7 @@ def find_traces(
         if threshold < FIRST_LOOK:
             new += _peel_off(search, audio, spectrogram, banks.model, resolution, threshold)
         for detection in new:
-            if detection.candidate.strength >= threshold and not _seen(detection, found):
+            if detection.candidate.strength >= threshold and not seen_before(detection, found):
                 found.append(_rated(detection, null))
                 _erase(left, detection, banks.model)
     return found
@@ -166,8 +166,21 @@ def _peel_off(
         search.refresh()
 
 
-def _seen(detection: Detection, found: list[Detection]) -> bool:
-    """Whether a trace is one already found: what peeling left of it."""
+def seen_before(detection: Detection, found: list[Detection]) -> bool:
+    """Return whether a trace is one already found: what peeling left of it, or a seam repeats.
+
+    Parameters
+    ----------
+    detection : Detection
+        The trace in question.
+    found : list of Detection
+        Those before it.
+
+    Returns
+    -------
+    bool
+        True when it runs within 12 ms, and twice the thickness, of one of them.
+    """
     points = detection.reading.trace
     for other in found:
         seen = other.reading.trace

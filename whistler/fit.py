@@ -45,6 +45,10 @@ class StrokeFit:
         Whether the solver met its tolerance; says nothing about uncertainty.
     at_bound : ndarray, shape (paths,), bool
         Whether L or density of a path ended on a limit.
+    tie_misfit : float
+        Largest residual of a tie, in sigmas.
+    used : tuple of PathTrace
+        The traces with only the points that were kept.
     """
 
     log_l: FloatArray
@@ -56,6 +60,8 @@ class StrokeFit:
     freedom: int
     converged: bool
     at_bound: NDArray[np.bool_]
+    tie_misfit: float
+    used: tuple[PathTrace, ...]
 
     @property
     def start(self) -> list[tuple[float, float]]:
@@ -172,23 +178,21 @@ def _summary(
     covariance *= max(1.0, chi_square / freedom) * (1.0 + SMALL_SAMPLE / freedom)
     unit = np.ones(used)
     unit[-1] = TIME_UNIT_S
-    rms = []
-    at = 0
-    for item, kept in zip(problem.traces, problem.kept, strict=True):
-        part = residual[at : at + kept.sum()] * item.trace.time_sd_s[kept]
-        at += len(part)
-        rms.append(float(np.sqrt(np.mean(part**2))))
+    points = sum(int(kept.sum()) for kept in problem.kept) + len(problem.traces)
+    ties = np.abs(residual[points:])
     near = np.minimum(x - low, high - x)[: problem.clock].reshape(-1, 2) < 1e-3
     return StrokeFit(
         log_l=x[0 : problem.clock : 2],
         log_density=x[1 : problem.clock : 2],
         lightning_time_s=problem.epoch_s + float(x[problem.clock]) * TIME_UNIT_S,
         covariance=covariance * np.outer(unit, unit),
-        rms_s=np.array(rms),
+        rms_s=problem.rms_s(x),
         chi_square=chi_square,
         freedom=freedom,
         converged=converged,
         at_bound=np.asarray(near.any(axis=1)),
+        tie_misfit=float(ties.max()) if len(ties) else 0.0,
+        used=problem.used(),
     )
 
 

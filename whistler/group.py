@@ -1,8 +1,7 @@
 """Strokes: which traces belong to one lightning, over how many hops, and which sferic it was.
 
-For every trace and every hop order the free fit predicts where the causative sferic must be. Three
-kinds of evidence then decide: a sferic there (a mixture over all seen, with a "none" term), the
-density against a stated prior, and other traces that agree in path and time (echo trains).
+What each trace says alone (:mod:`whistler.evidence`) is joined by what traces say of each other:
+echo trains agree in path and time, paths of one stroke in time.
 """
 
 from __future__ import annotations
@@ -11,58 +10,19 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from fieldlines import FieldLineModel, saturated_density
-from fieldlines.constants import SPEED_OF_LIGHT_M_S
-from fieldlines.errors import FloatArray
+from fieldlines import FieldLineModel
+from whistler.evidence import FoundTrace, Reading, Surroundings, read_hops, weigh
 from whistler.fit import StrokeFit, fit_stroke
-from whistler.problem import PathTrace, SfericTime, Ties, sferic_at
+from whistler.problem import PathTrace, SfericTime, Ties
 from whistler.settings import Settings
-from whistler.sferic import (
-    READING_SD_S,
-    Causes,
-    SfericCatalogue,
-    front_lag_s,
-    possible_causes,
-)
-from whistler.trace import Trace
+from whistler.sferic import READING_SD_S, SfericCatalogue
 
-HOP_PRIOR = (
-    0.55,
-    0.25,
-    0.12,
-    0.05,
-    0.03,
-    0.01,
-    0.01,
-    0.01,
-)  # our own estimate, from common practice
 TRAIN_PRIOR = 0.1  # share of traces with an echo partner in sight (our own estimate)
-STORM_SHARE = 0.1  # of the density prior, three times as wide: depleted and refilling tubes
+LAG_SHARE = 0.2  # of the front's lag behind light, not known better than that
 SURE = 0.9  # probability from which a sferic is taken as identified
 MODEL_FLOOR = np.array(
     [0.008, 0.03, 0.0015]
 )  # what two hops of one path may differ by in the model
-
-
-@dataclass(frozen=True)
-class FoundTrace:
-    """A trace with its one-hop-equivalent curve, before anything is known about its stroke.
-
-    Parameters
-    ----------
-    trace : Trace
-        The points.
-    l_value, density_m3, lightning_time_s : float
-        One-hop-equivalent fit.
-    centre_share_sd : float
-        One-sigma of where the trace lies within its thickness, as a share of the travel time.
-    """
-
-    trace: Trace
-    l_value: float
-    density_m3: float
-    lightning_time_s: float
-    centre_share_sd: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -83,6 +43,8 @@ class Stroke:
         The identified causative sferic.
     sferic_probability : float
         Probability of the likeliest one.
+    hop_probability : float
+        Probability of the hop orders, given sferics, density prior and echoes.
     """
 
     members: tuple[int, ...]
@@ -91,21 +53,7 @@ class Stroke:
     fit: StrokeFit
     sferic: SfericTime | None
     sferic_probability: float
-
-
-@dataclass(frozen=True)
-class _Reading:
-    """One trace under one hop order."""
-
-    fit: StrokeFit
-    causes: Causes
-    score: float
-    best_cause: int
-    cause_probability: float
-
-    @property
-    def mean(self) -> FloatArray:
-        return np.array([self.fit.log_l[0], self.fit.log_density[0], self.fit.lightning_time_s])
+    hop_probability: float = 1.0
 
 
 def group_strokes(
@@ -114,6 +62,7 @@ def group_strokes(
     *,
     model: FieldLineModel,
     settings: Settings,
+    receiver_latitude_rad: float | None = None,
 ) -> list[Stroke]:
     """Return the strokes behind the traces, in time order.
 
@@ -127,113 +76,30 @@ def group_strokes(
         Default model.
     settings : Settings
         Hop range, density prior, stroke distance.
+    receiver_latitude_rad : float, optional
+        Geomagnetic latitude of the receiver.
 
     Returns
     -------
     list of Stroke
         Every trace is in exactly one.
     """
-    readings = [_read_hops(item, sferics, model, settings) for item in found]
+    around = Surroundings(sferics, model, settings, receiver_latitude_rad)
+    readings = [read_hops(item, around=around) for item in found]
     hops, partners = _assign_hops(readings)
     strokes = [
-        _fit_group(members, found, readings, hops, partners, sferics, model, settings)
+        _fit_group(members, found, readings, hops, partners, around)
         for members in _connect(readings, hops, partners)
     ]
     return sorted(strokes, key=lambda stroke: stroke.fit.lightning_time_s)
 
 
-def _read_hops(
-    item: FoundTrace, sferics: SfericCatalogue, model: FieldLineModel, settings: Settings
-) -> dict[int, _Reading]:
-    readings: dict[int, _Reading] = {}
-    for hops in range(1, settings.max_hops + 1):
-        density = item.density_m3 / hops**2
-        prior_dex = np.log10(density / float(saturated_density(np.clip(item.l_value, 1.2, 8.0))))
-        if abs(prior_dex) > 6.0 * settings.density_prior_sd_dex and readings:
-            continue
-        fit = fit_stroke(
-            [PathTrace(item.trace, hops, 0, item.centre_share_sd)],
-            start=[(item.l_value, density)],
-            lightning_time_s=item.lightning_time_s,
-            model=model,
-            robust=False,
-        )
-        readings[hops] = _weigh(fit, hops, sferics, settings)
-    return readings
-
-
-def predicted_sferic(
-    fit: StrokeFit, hops: int, *, settings: Settings
-) -> tuple[float, float, FloatArray]:
-    """Return where the causative sferic must be, its one-sigma, and its gradient.
-
-    Parameters
-    ----------
-    fit : StrokeFit
-        A fit with free time.
-    hops : int
-        Parity decides where the stroke was.
-    settings : Settings
-        Stroke distance.
-
-    Returns
-    -------
-    float, float, ndarray
-        Time and sigma in s; derivatives with respect to the fit's unknowns.
-    """
-    time_s, gradient = sferic_at(fit.log_l, fit.lightning_time_s, odd_hops=hops % 2 == 1)
-    place_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
-    variance = gradient @ fit.covariance @ gradient + READING_SD_S**2 + place_s**2
-    return time_s, float(np.sqrt(variance)), gradient
-
-
-def _weigh(fit: StrokeFit, hops: int, sferics: SfericCatalogue, settings: Settings) -> _Reading:
-    """Score one hop order: hop prior, sferic mixture and density prior together."""
-    predicted_s, sd_s, gradient = predicted_sferic(fit, hops, settings=settings)
-    late_s = front_lag_s(predicted_s - fit.lightning_time_s)
-    causes = possible_causes(sferics, predicted_s=predicted_s + late_s, sd_s=sd_s)
-    gain = fit.covariance @ gradient / sd_s**2
-    shift = (causes.time_s - late_s - predicted_s)[:, None] * gain
-    tied_sd = np.sqrt(max(fit.covariance[1, 1] - gain[1] * (fit.covariance @ gradient)[1], 0.0))
-    with_cause = _density_score(
-        fit.log_l[0] + shift[:, 0], fit.log_density[0] + shift[:, 1], float(tied_sd), settings
-    )
-    free = _density_score(
-        fit.log_l, fit.log_density, float(np.sqrt(fit.covariance[1, 1])), settings
-    )
-    weight = np.append(causes.odds * np.exp(with_cause), np.exp(free[0]))
-    share = weight / weight.sum()
-    best = int(np.argmax(weight[:-1])) if len(causes.odds) else -1
-    return _Reading(
-        fit=fit,
-        causes=Causes(causes.index, causes.time_s, causes.odds * np.exp(with_cause - free[0])),
-        score=float(np.log(HOP_PRIOR[hops - 1]) + np.log(weight.sum())),
-        best_cause=int(causes.index[best]) if best >= 0 else -1,
-        cause_probability=float(share[best]) if best >= 0 else 0.0,
-    )
-
-
-def _density_score(
-    log_l: FloatArray,
-    log_density: FloatArray,
-    log_density_sd: float,
-    settings: Settings,
-) -> FloatArray:
-    """Log probability of a density under the prior: lognormal, with a wide share for storms."""
-    expected = np.log(saturated_density(np.exp(np.clip(log_l, np.log(1.2), np.log(8.0)))))
-    total = np.zeros_like(expected)
-    for share, factor in ((1.0 - STORM_SHARE, 1.0), (STORM_SHARE, 3.0)):
-        sd = np.hypot(factor * settings.density_prior_sd_dex * np.log(10.0), log_density_sd)
-        total += share * np.exp(-0.5 * ((log_density - expected) / sd) ** 2) / sd
-    return np.log(np.maximum(total, 1e-30))
-
-
-def _likeliest(readings: dict[int, _Reading]) -> int:
+def _likeliest(readings: dict[int, Reading]) -> int:
     return max(readings, key=lambda hops: readings[hops].score)
 
 
 def _assign_hops(
-    readings: list[dict[int, _Reading]],
+    readings: list[dict[int, Reading]],
 ) -> tuple[list[int], dict[tuple[int, int], float]]:
     """Hop order of every trace, moved pair by pair where an echo train explains both better."""
     hops = [_likeliest(item) for item in readings]
@@ -270,7 +136,7 @@ def _consistent(
     return (i not in fixed or hops[i] == wanted[0]) and (j not in fixed or hops[j] == wanted[1])
 
 
-def _train_bonus(first: _Reading, second: _Reading) -> float:
+def _train_bonus(first: Reading, second: Reading) -> float:
     """Log odds that two traces share path and stroke, against chance agreement."""
     difference = second.mean - first.mean
     if abs(difference[2]) > 0.2:
@@ -286,7 +152,7 @@ def _train_bonus(first: _Reading, second: _Reading) -> float:
 
 
 def _connect(
-    readings: list[dict[int, _Reading]],
+    readings: list[dict[int, Reading]],
     hops: list[int],
     partners: dict[tuple[int, int], float],
 ) -> list[list[int]]:
@@ -312,7 +178,7 @@ def _connect(
     return list(groups.values())
 
 
-def _same_stroke(first: _Reading, second: _Reading) -> bool:
+def _same_stroke(first: Reading, second: Reading) -> bool:
     if first.best_cause >= 0 and first.best_cause == second.best_cause:
         return min(first.cause_probability, second.cause_probability) > 0.3
     apart = abs(first.fit.lightning_time_s - second.fit.lightning_time_s)
@@ -333,36 +199,37 @@ def _paths(members: list[int], partners: dict[tuple[int, int], float]) -> dict[i
 def _fit_group(
     members: list[int],
     found: list[FoundTrace],
-    readings: list[dict[int, _Reading]],
+    readings: list[dict[int, Reading]],
     hops: list[int],
     partners: dict[tuple[int, int], float],
-    sferics: SfericCatalogue,
-    model: FieldLineModel,
-    settings: Settings,
+    around: Surroundings,
 ) -> Stroke:
     path = _paths(members, partners)
     traces = [
         PathTrace(found[k].trace, hops[k], path[k], found[k].centre_share_sd) for k in members
     ]
     first_of = {p: k for k, p in reversed(path.items())}
-    start = []
-    for p in sorted(first_of):
-        single = readings[first_of[p]][hops[first_of[p]]].fit
-        start.append((float(np.exp(single.log_l[0])), float(np.exp(single.log_density[0]))))
-    time_s = float(np.mean([readings[k][hops[k]].fit.lightning_time_s for k in members]))
-    free = fit_stroke(traces, start=start, lightning_time_s=time_s, model=model)
-    reading = _weigh(free, hops[members[0]], sferics, settings)
+    singles = [readings[first_of[p]][hops[first_of[p]]].fit for p in sorted(first_of)]
+    free = fit_stroke(
+        traces,
+        start=[single.start[0] for single in singles],
+        lightning_time_s=float(np.mean([single.lightning_time_s for single in singles])),
+        model=around.model,
+    )
+    reading = weigh(free, hops[members[0]], around=around)
     sferic, fit = None, free
     if reading.cause_probability > SURE:
-        predicted_s, _, _ = predicted_sferic(free, hops[members[0]], settings=settings)
-        late_s = front_lag_s(predicted_s - free.lightning_time_s)
-        at = float(sferics.time_s[reading.best_cause]) - late_s
-        sferic = SfericTime(at, READING_SD_S, hops[members[0]] % 2 == 1)
+        sferic = SfericTime(
+            float(around.sferics.time_s[reading.best_cause]) - reading.sferic_lag_s,
+            float(np.hypot(READING_SD_S, LAG_SHARE * reading.sferic_lag_s)),
+            hops[members[0]] % 2 == 1,
+            around.receiver_latitude_rad,
+        )
         fit = fit_stroke(
             traces,
             start=free.start,
             lightning_time_s=free.lightning_time_s,
-            model=model,
+            model=around.model,
             ties=Ties(sferic),
         )
     return Stroke(
@@ -372,4 +239,20 @@ def _fit_group(
         fit,
         sferic,
         reading.cause_probability,
+        _hop_probability(members, readings, hops, partners),
     )
+
+
+def _hop_probability(
+    members: list[int],
+    readings: list[dict[int, Reading]],
+    hops: list[int],
+    partners: dict[tuple[int, int], float],
+) -> float:
+    """Probability of the chosen orders; traces of one order speak for it together."""
+    if len({hops[k] for k in members}) > 1 or any(set(pair) <= set(members) for pair in partners):
+        return 1.0  # an echo train: the ratio of the delays has spoken
+    orders = set.intersection(*(set(readings[k]) for k in members))
+    scores = np.array([sum(readings[k][order].score for k in members) for order in sorted(orders)])
+    share = np.exp(scores - scores.max())
+    return float(share[sorted(orders).index(hops[members[0]])] / share.sum())

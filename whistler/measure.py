@@ -15,11 +15,12 @@ import numpy as np
 from fieldlines import FieldLineModel
 from whistler.cleaning import CleanAudio, clean
 from whistler.clock import decimal_year, iso_time
-from whistler.discovery import Banks, find_traces
+from whistler.discovery import Banks, find_traces, seen_before
 from whistler.errors import Notice, printable
+from whistler.evidence import FoundTrace
 from whistler.follow import Detection
-from whistler.group import FoundTrace, group_strokes
-from whistler.model import field_line_model
+from whistler.group import group_strokes
+from whistler.model import field_line_model, receiver_latitude
 from whistler.problem import Ties
 from whistler.recording import AudioBlock, Recording, open_recording
 from whistler.results import Sighting, stroke_rows
@@ -33,6 +34,8 @@ if TYPE_CHECKING:
 
 BLOCK_S = 160.0
 OVERLAP_S = 20.0  # a five-hop whistler with its sferic is whole in one block or the next
+SEAM_S = 0.2
+MOST_IN_BLOCK = 1000  # detections of earlier blocks that a seam can repeat
 VIEWED_S = 600.0  # recordings up to this long keep their spectrogram for the figures
 
 Progress = Callable[[float], None]
@@ -145,7 +148,7 @@ def _html_cells(row: WhistlerRow) -> str:
 class _BlockResult:
     detections: list[Detection]
     sferics: SfericCatalogue
-    view: Spectrogram
+    view: Spectrogram | None
 
 
 def measure_recording(
@@ -175,22 +178,23 @@ def measure_recording(
         recording = open_recording(recording, station=settings.station, channel=settings.channel)
     model = field_line_model(settings, decimal_year=decimal_year(recording.start_time))
     banks = _banks(_bank_model(recording, settings), settings)
-    results = []
+    results: list[_BlockResult] = []
+    keep = recording.duration_s <= VIEWED_S
     for block in recording.blocks(BLOCK_S, overlap_s=OVERLAP_S):
-        results.append(_measure_block(block, recording, banks, settings))
+        result = _measure_block(block, recording, banks, settings)
+        results.append(result if keep else replace(result, view=None))
         if progress is not None:
             done = block.first_frame + len(block.samples)
             progress(done / max(recording.frame_count, 1))
-    detections = [item for result in results for item in result.detections]
+    detections = _once(results)
     sferics = _joined([result.sferics for result in results], recording.duration_s)
     rows = _rows(detections, sferics, recording, model, settings)
-    keep = recording.duration_s <= VIEWED_S
     return Measurement(
         recording=recording,
         settings=settings,
         rows=tuple(rows),
         notices=(),
-        views=tuple(result.view for result in results) if keep else (),
+        views=tuple(result.view for result in results if result.view is not None),
         sferics=sferics,
         model=model,
     )
@@ -213,22 +217,35 @@ def _measure_block(
     end_s = start_s + len(block.samples) / recording.sample_rate_hz
     audio = clean(block, settings=settings)
     view = spectrogram(audio, band_low_hz=settings.band_low_hz)
-    # What the overlap shows twice belongs to the block that holds more of it.
+    # What the overlap shows twice belongs to the block that holds more of it; near the seam both
+    # keep it, since each may time it a little to the other's side.
     low_s = start_s + 0.5 * OVERLAP_S if block.first_frame > 0 else -np.inf
     at_end = block.first_frame + len(block.samples) >= recording.frame_count
     high_s = np.inf if at_end else end_s - 0.5 * OVERLAP_S
     detections = [
         item
         for item in find_traces(audio, view, banks=banks, settings=settings)
-        if low_s <= item.candidate.time_s < high_s
+        if low_s - SEAM_S <= item.candidate.time_s < high_s + SEAM_S
     ]
     return _BlockResult(detections, _within(audio, low_s, high_s), view)
+
+
+def _once(results: list[_BlockResult]) -> list[Detection]:
+    """All detections; what two blocks saw on both sides of their seam, once."""
+    kept: list[Detection] = []
+    for result in results:
+        before = kept[-MOST_IN_BLOCK:]
+        kept += [item for item in result.detections if not seen_before(item, before)]
+    return kept
 
 
 def _within(audio: CleanAudio, low_s: float, high_s: float) -> SfericCatalogue:
     inside = (audio.sferics.time_s >= low_s) & (audio.sferics.time_s < high_s)
     return SfericCatalogue(
-        audio.sferics.time_s[inside], audio.sferics.amplitude[inside], audio.sferics.duration_s
+        audio.sferics.time_s[inside],
+        audio.sferics.amplitude[inside],
+        audio.sferics.duration_s,
+        audio.sferics.front_hz,
     )
 
 
@@ -239,6 +256,7 @@ def _joined(parts: list[SfericCatalogue], duration_s: float) -> SfericCatalogue:
         np.concatenate([part.time_s for part in parts]),
         np.concatenate([part.amplitude for part in parts]),
         duration_s,
+        parts[0].front_hz,
     )
 
 
@@ -260,7 +278,10 @@ def _rows(
         for item in detections
     ]
     rows: list[WhistlerRow] = []
-    strokes = group_strokes(found, sferics, model=model, settings=settings)
+    latitude_rad = receiver_latitude(settings, decimal_year=decimal_year(recording.start_time))
+    strokes = group_strokes(
+        found, sferics, model=model, settings=settings, receiver_latitude_rad=latitude_rad
+    )
     for number, stroke in enumerate(strokes, start=1):
         sightings = [
             Sighting(
@@ -278,6 +299,7 @@ def _rows(
             model=model,
             ties=Ties(stroke.sferic),
             settings=settings,
+            receiver_latitude_rad=latitude_rad,
         ):
             rows.append(replace(row, time=iso_time(recording.time_at(row.sferic_time_s))))
     return sorted(rows, key=lambda row: (row.group, row.hops, row.l_value, row.frequency_low_hz))

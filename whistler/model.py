@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import numpy as np
+
 from fieldlines import CentredDipole, ChapmanLayer, FieldLineModel
+from fieldlines.ground import GroundPoint, to_geomagnetic
 from whistler.settings import Settings
 
 
@@ -30,3 +33,25 @@ def field_line_model(settings: Settings, *, decimal_year: float) -> FieldLineMod
         density_exponent=settings.density_exponent,
         layer=layer,
     )
+
+
+def receiver_latitude(settings: Settings, *, decimal_year: float) -> float | None:
+    """Return the receiver's geomagnetic latitude, rad; None when the station has no position.
+
+    Parameters
+    ----------
+    settings : Settings
+        With the station.
+    decimal_year : float
+        Date of the dipole, 1900 to 2030.
+
+    Returns
+    -------
+    float or None
+        Latitude in the centred dipole.
+    """
+    station = settings.station
+    if station.latitude_deg is None or station.longitude_deg is None:
+        return None
+    place = GroundPoint(station.latitude_deg, station.longitude_deg)
+    return float(np.radians(to_geomagnetic(place, decimal_year=decimal_year).latitude_deg))

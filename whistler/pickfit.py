@@ -12,8 +12,8 @@ from whistler.clock import decimal_year, iso_time
 from whistler.errors import Notice, UsageError
 from whistler.fit import fit_stroke
 from whistler.group import Stroke
-from whistler.model import field_line_model
-from whistler.problem import PathTrace, SfericTime, Ties
+from whistler.model import field_line_model, receiver_latitude
+from whistler.problem import L_LIMITS, PathTrace, SfericTime, Ties
 from whistler.results import Sighting, stroke_rows
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings
@@ -69,10 +69,15 @@ def fit_picks(
         When a trace has fewer than three points.
     """
     _check(traces)
+    if not sferic_time_sd_s > 0.0:
+        reason = f"{sferic_time_sd_s} s is not above 0"
+        raise UsageError(Notice("E601", "sferic_time_sd_s", reason, "give its one-sigma in s"))
     model = field_line_model(settings, decimal_year=decimal_year(start_time))
+    settings = replace(settings, l_range=L_LIMITS)  # picks need not lie where the search looks
+    latitude_rad = receiver_latitude(settings, decimal_year=decimal_year(start_time))
     sferic = None
     if sferic_time_s is not None:
-        sferic = SfericTime(sferic_time_s, sferic_time_sd_s, hops % 2 == 1)
+        sferic = SfericTime(sferic_time_s, sferic_time_sd_s, hops % 2 == 1, latitude_rad)
     tie = None if lightning_time_s is None else (lightning_time_s, LIGHTNING_SD_S)
     ties = Ties(sferic, tie, l_value)
     items = [PathTrace(trace, hops, number) for number, trace in enumerate(traces.values())]
@@ -100,6 +105,7 @@ def fit_picks(
         model=model,
         ties=ties,
         settings=settings,
+        receiver_latitude_rad=latitude_rad,
     )
     return [replace(row, time=_clock(start_time, row.sferic_time_s)) for row in rows]
 

@@ -7,7 +7,7 @@ trace where it lies within its thickness, in sigmas of that: every one of order 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,11 +57,14 @@ class SfericTime:
         One-sigma of reading it.
     odd_hops : bool
         Whether the stroke was in the conjugate hemisphere.
+    receiver_latitude_rad : float, optional
+        Geomagnetic latitude of the receiver, when it is known.
     """
 
     time_s: float
     sd_s: float
     odd_hops: bool
+    receiver_latitude_rad: float | None = None
 
 
 @dataclass(frozen=True)
@@ -78,38 +81,55 @@ class Ties:
         L to hold every path at.
     density_prior_dex : float, optional
         One-sigma, in decades, of the density about the climatology at the fitted L.
+    density_prior_factor : float
+        What the climatology is multiplied with.
     """
 
     sferic: SfericTime | None = None
     lightning_time_s: tuple[float, float] | None = None
     l_value: float | None = None
     density_prior_dex: float | None = None
+    density_prior_factor: float = 1.0
 
 
 FREE = Ties()
 HELD = 1e-5  # one-sigma, in ln L, of an L that is given
 
 
-def sferic_path_s(l_value: float | FloatArray) -> float:
-    """Return the sferic's way from the conjugate foot to the receiver, s.
+def sferic_path_s(
+    l_value: float | FloatArray, *, receiver_latitude_rad: float | None = None
+) -> float:
+    r"""Return how much later than the whistler's start the sferic comes from the conjugate foot, s.
 
     Parameters
     ----------
     l_value : float or ndarray
         Field line; several are averaged first.
+    receiver_latitude_rad : float, optional
+        Geomagnetic latitude of the receiver; without it the receiver stands at the near foot.
 
     Returns
     -------
     float
-        ``2 Lambda RE / c`` with ``cos(Lambda)**2 = 1 / L``.
+        ``2 Lambda RE / c`` with ``cos(Lambda)**2 = 1 / L``, Lambda no larger than the receiver's
+        latitude.
+
+    Notes
+    -----
+    A receiver at latitude :math:`\lambda` on the meridian of the path hears the sferic after
+    :math:`(\Lambda + \lambda) R_E / c` and everything of the whistler
+    :math:`|\Lambda - \lambda| R_E / c` late; the difference is
+    :math:`2 \min(\Lambda, \lambda) R_E / c`.
 
     Examples
     --------
     >>> f"{1e3 * sferic_path_s(2.2):.1f} ms"
     '35.3 ms'
     """
-    mean_l = float(np.mean(l_value))
-    return float(2.0 * np.arccos(mean_l**-0.5) * EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S)
+    latitude_rad = float(np.arccos(float(np.mean(l_value)) ** -0.5))
+    if receiver_latitude_rad is not None:
+        latitude_rad = min(latitude_rad, abs(receiver_latitude_rad))
+    return float(2.0 * latitude_rad * EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S)
 
 
 def _unit(size: int, at: int) -> FloatArray:
@@ -123,7 +143,11 @@ def _tie(misfit: float, by_x: FloatArray, sd: float) -> tuple[FloatArray, FloatA
 
 
 def sferic_at(
-    log_l: FloatArray, lightning_time_s: float, *, odd_hops: bool
+    log_l: FloatArray,
+    lightning_time_s: float,
+    *,
+    odd_hops: bool,
+    receiver_latitude_rad: float | None = None,
 ) -> tuple[float, FloatArray]:
     """Return when the causative sferic reaches the receiver, and its derivatives.
 
@@ -135,6 +159,8 @@ def sferic_at(
         Time of the stroke.
     odd_hops : bool
         Whether it was in the conjugate hemisphere; else it was beside the receiver.
+    receiver_latitude_rad : float, optional
+        Geomagnetic latitude of the receiver.
 
     Returns
     -------
@@ -148,9 +174,11 @@ def sferic_at(
         return lightning_time_s, by_x
     l_values = np.exp(log_l)
     mean_l = float(l_values.mean())
-    by_l = EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S / (mean_l * np.sqrt(mean_l - 1.0))
-    by_x[0:-1:2] = by_l * l_values / len(l_values)
-    return lightning_time_s + sferic_path_s(mean_l), by_x
+    way_s = sferic_path_s(mean_l, receiver_latitude_rad=receiver_latitude_rad)
+    if way_s == sferic_path_s(mean_l):  # the foot, not the receiver, sets the way
+        by_l = EARTH_RADIUS_M / SPEED_OF_LIGHT_M_S / (mean_l * np.sqrt(mean_l - 1.0))
+        by_x[0:-1:2] = by_l * l_values / len(l_values)
+    return lightning_time_s + way_s, by_x
 
 
 class StrokeProblem:
@@ -200,6 +228,33 @@ class StrokeProblem:
         self.kept = kept
         self._last = None
 
+    def used(self) -> tuple[PathTrace, ...]:
+        """Return the traces with only the points that are kept."""
+        return tuple(
+            replace(item, trace=item.trace.only(kept))
+            for item, kept in zip(self.traces, self.kept, strict=True)
+        )
+
+    def rms_s(self, x: FloatArray) -> FloatArray:
+        """Return the root mean square of trace minus model, each without its own shift."""
+        unshifted = x.copy()
+        unshifted[self.clock + 1 :] = 0.0
+        time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
+        return np.array(
+            [
+                np.sqrt(
+                    np.mean(
+                        (
+                            self._trace_part(number, kept, unshifted, time_s)[0]
+                            * self.traces[number].trace.time_sd_s[kept]
+                        )
+                        ** 2
+                    )
+                )
+                for number, kept in enumerate(self.kept)
+            ]
+        )
+
     def _evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Traces first, then where each lies within its thickness, then ties."""
         time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
@@ -234,7 +289,10 @@ class StrokeProblem:
         ties, parts = self.ties, []
         if ties.sferic is not None:
             predicted_s, slope = sferic_at(
-                x[0 : self.clock : 2], time_s, odd_hops=ties.sferic.odd_hops
+                x[0 : self.clock : 2],
+                time_s,
+                odd_hops=ties.sferic.odd_hops,
+                receiver_latitude_rad=ties.sferic.receiver_latitude_rad,
             )
             by_x = np.pad(slope, (0, self.size - len(slope)))
             by_x[self.clock] *= TIME_UNIT_S
@@ -252,6 +310,7 @@ class StrokeProblem:
                 step = np.log(saturated_density(1.001 * np.exp(x[first]))) - expected
                 by_x = _unit(self.size, first + 1) - step / np.log(1.001) * _unit(self.size, first)
                 sd = ties.density_prior_dex * np.log(10.0)
+                expected += np.log(ties.density_prior_factor)
                 parts.append(_tie(float(expected - x[first + 1]), by_x, sd))
         return parts
 

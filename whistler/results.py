@@ -16,8 +16,9 @@ from fieldlines import (
     zero_frequency_dispersion,
 )
 from fieldlines.errors import FloatArray
+from whistler.evidence import predicted_sferic
 from whistler.fit import StrokeFit, fit_stroke
-from whistler.group import Stroke, predicted_sferic
+from whistler.group import SURE, Stroke
 from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN, WhistlerRow
 from whistler.settings import Settings
@@ -59,6 +60,7 @@ class _PathNumbers:
     correlation: float = NAN
     status: str = "undetermined"
     leaning: StrokeFit | None = None  # the fit the numbers are from, where a prior had to help
+    misfit: bool = False
 
 
 def stroke_rows(
@@ -70,6 +72,7 @@ def stroke_rows(
     model: FieldLineModel,
     ties: Ties,
     settings: Settings,
+    receiver_latitude_rad: float | None = None,
 ) -> list[WhistlerRow]:
     """Return one row for each trace of a stroke.
 
@@ -89,6 +92,8 @@ def stroke_rows(
         The ties of the fit.
     settings : Settings
         Declared one-sigmas of what the model leaves open.
+    receiver_latitude_rad : float, optional
+        Geomagnetic latitude of the receiver.
 
     Returns
     -------
@@ -96,7 +101,7 @@ def stroke_rows(
         In the order of the stroke's traces; `time` is left to the caller, who knows the clock.
     """
     fit = stroke.fit
-    profile = profile_covariance(fit, stroke.traces, model=model, ties=ties, settings=settings)
+    profile = profile_covariance(fit, model=model, ties=ties, settings=settings)
     numbers = [
         _path_numbers(stroke, path, profile[path], model, ties, settings)
         for path in range(len(fit.log_l))
@@ -111,6 +116,8 @@ def stroke_rows(
             group=group,
             model=model,
             settings=settings,
+            ties=ties,
+            receiver_latitude_rad=receiver_latitude_rad,
         )
         for number, sighting in enumerate(sightings)
     ]
@@ -126,11 +133,15 @@ def _row(
     group: int,
     model: FieldLineModel,
     settings: Settings,
+    ties: Ties,
+    receiver_latitude_rad: float | None,
 ) -> WhistlerRow:
     item = stroke.traces[number]
     found = numbers[item.path]
     fit = found.leaning or stroke.fit
-    sferic_s, sferic_sd_s, _ = predicted_sferic(fit, item.hops, settings=settings)
+    sferic_s, sferic_sd_s, _ = predicted_sferic(
+        fit, item.hops, settings=settings, receiver_latitude_rad=receiver_latitude_rad
+    )
     if stroke.sferic is not None:
         sferic_s, sferic_sd_s = stroke.sferic.time_s, stroke.sferic.sd_s
     return WhistlerRow(
@@ -154,7 +165,7 @@ def _row(
         significance=sighting.significance,
         fit_rms_s=float(fit.rms_s[number]),
         uncertainty_status=found.status,
-        flags=_flags(stroke, item, sighting),
+        flags=_flags(stroke, item, sighting, found=found, ties=ties),
         trace=item.trace,
         **asdict(_derived(fit, item.path, found, model)),
     )
@@ -178,6 +189,8 @@ def _derived(fit: StrokeFit, path: int, found: _PathNumbers, model: FieldLineMod
         dispersion = zero_frequency_dispersion(
             l_value, equatorial_density_m3=density_m3, model=model
         )
+        if found.misfit or fit.at_bound[path]:
+            return _Derived()
         if not np.isfinite(found.l_value):
             return _Derived(dispersion)
         tip = nose(l_value, equatorial_density_m3=density_m3, model=model)
@@ -201,21 +214,27 @@ def _path_numbers(
     settings: Settings,
 ) -> _PathNumbers:
     fit = stroke.fit
-    status = uncertainty_status(fit, path)
+    status = uncertainty_status(fit, path, l_range=settings.l_range)
     l_value, density = fit.start[path]
+    if status == "ok" and stroke.hop_probability < SURE:
+        # The hop order, a factor of four in density and more, hangs on the density prior.
+        return _PathNumbers(l_value=l_value, density_m3=density, status="prior-dominated")
     if status == "ok":
         part = fit.covariance[2 * path : 2 * path + 2, 2 * path : 2 * path + 2]
         l_sd, density_sd = np.sqrt(np.diag(part))
+        free = ties.l_value is None
         return _PathNumbers(
             l_value,
-            l_value * float(l_sd),
-            l_value * float(np.sqrt(profile[0])),
+            l_value * float(l_sd) if free else NAN,
+            l_value * float(np.sqrt(profile[0])) if free else NAN,
             density,
             density * float(density_sd),
             density * float(np.sqrt(profile[1])),
-            float(part[0, 1] / (l_sd * density_sd)) if l_sd * density_sd > 0 else NAN,
+            float(part[0, 1] / (l_sd * density_sd)) if free and l_sd * density_sd > 0 else NAN,
             status,
         )
+    if status == "misfit":
+        return _PathNumbers(misfit=True)
     if status == "at-bound":
         return _PathNumbers(status=status)
     return _with_prior(stroke.traces, fit, path, model, ties, settings)
@@ -230,11 +249,17 @@ def _with_prior(
     settings: Settings,
 ) -> _PathNumbers:
     """Lean on the climatology where the trace alone is too weak, and say so; no sigma then."""
-    prior = replace(ties, density_prior_dex=settings.density_prior_sd_dex)
+    if settings.density_prior == "none":
+        return _PathNumbers()
+    prior = replace(
+        ties,
+        density_prior_dex=settings.density_prior_sd_dex,
+        density_prior_factor=settings.density_prior_factor,
+    )
     leaning = fit_stroke(
         traces, start=fit.start, lightning_time_s=fit.lightning_time_s, model=model, ties=prior
     )
-    if uncertainty_status(leaning, path, width=LEANING) != "ok":
+    if uncertainty_status(leaning, path, l_range=settings.l_range, leniency=LEANING) != "ok":
         return _PathNumbers()
     l_value, density = leaning.start[path]
     return _PathNumbers(
@@ -242,14 +267,22 @@ def _with_prior(
     )
 
 
-def _flags(stroke: Stroke, item: PathTrace, sighting: Sighting) -> tuple[str, ...]:
+def _flags(
+    stroke: Stroke, item: PathTrace, sighting: Sighting, *, found: _PathNumbers, ties: Ties
+) -> tuple[str, ...]:
     words = []
+    if found.misfit:
+        words.append("misfit")
+    if ties.l_value is not None:
+        words.append("l-given")
     if sum(other.path == item.path for other in stroke.traces) > 1:
         words.append("echo")
     if sighting.thickness_s > DIFFUSE_S:
         words.append("diffuse")
     if stroke.sferic is None and stroke.sferic_probability > AMBIGUOUS:
         words.append("sferic-ambiguous")
+    if stroke.hop_probability < SURE:
+        words.append("hops-ambiguous")
     if not stroke.fit.converged:
         words.append("not-converged")
     return tuple(words)

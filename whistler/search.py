@@ -203,7 +203,7 @@ class CurveSearch:
         at : int
             From :meth:`peaks`.
         threshold : float
-            Least sum; sums far from a peeled ridge are not made again until they are asked for here.
+            Least sum; those far from a peeled ridge are not made again until asked for here.
 
         Returns
         -------

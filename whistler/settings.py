@@ -8,6 +8,8 @@ from typing import Any
 from whistler.errors import Notice, UsageError
 from whistler.station import Station
 
+DENSITY_PRIORS = ("saturated", "none")
+
 
 @dataclass(frozen=True)
 class Settings:
@@ -34,13 +36,16 @@ class Settings:
     stroke_distance_sd_m : float
         One-sigma distance of the stroke from the foot of the path, m.
     density_prior : str
-        Name of the density climatology that breaks ties between hop orders.
+        What breaks ties between hop orders: ``"saturated"``, the climatology of the full
+        plasmasphere, or ``"none"``.
+    density_prior_factor : float
+        What the climatology is multiplied with, for example for season and solar cycle.
     density_prior_sd_dex : float
         One-sigma of that prior, in decades of density.
     l_range : tuple of float
         Lowest and highest L searched.
-    seed : int
-        Seed of every random draw of the analysis.
+    options : tuple of (str, object)
+        What a command was told beyond these: start time, ties of a fit.
 
     Raises
     ------
@@ -65,9 +70,10 @@ class Settings:
     hm_f2_sd_km: float = 40.0
     stroke_distance_sd_m: float = 800e3
     density_prior: str = "saturated"
+    density_prior_factor: float = 1.0
     density_prior_sd_dex: float = 0.25
     l_range: tuple[float, float] = (1.6, 5.5)
-    seed: int = 1
+    options: tuple[tuple[str, Any], ...] = ()
 
     def __post_init__(self) -> None:
         """Check every value against its allowed range."""
@@ -79,6 +85,8 @@ class Settings:
             _refuse("band_low_hz", self.band_low_hz, f"is not below {self.band_high_hz=:g}")
         if not 1.2 <= self.l_range[0] < self.l_range[1] <= 8.0:
             _refuse("l_range", self.l_range, "is not an increasing pair within 1.2 to 8")
+        if self.density_prior not in DENSITY_PRIORS:
+            _refuse("density_prior", self.density_prior, f"is not one of {DENSITY_PRIORS}")
         if self.channel != "mean" and not (isinstance(self.channel, int) and self.channel >= 1):
             _refuse("channel", self.channel, "is neither a number from 1 nor 'mean'")
 
@@ -86,6 +94,7 @@ class Settings:
         """Return all settings as plain values, ready for JSON."""
         plain: dict[str, Any] = {item.name: getattr(self, item.name) for item in fields(self)}
         plain["station"] = self.station.to_dict()
+        plain["options"] = dict(self.options)
         return {
             name: list(value) if isinstance(value, tuple) else value
             for name, value in plain.items()
@@ -102,8 +111,8 @@ _RANGES: dict[str, tuple[float, float]] = {
     "fo_f2_sd_mhz": (0.0, 10.0),
     "hm_f2_sd_km": (0.0, 200.0),
     "stroke_distance_sd_m": (0.0, 5e6),
+    "density_prior_factor": (0.01, 100.0),
     "density_prior_sd_dex": (0.05, 5.0),
-    "seed": (0, 2**32 - 1),
 }
 
 

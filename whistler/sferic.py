@@ -29,11 +29,14 @@ class SfericCatalogue:
         Peak in robust sigmas of the whitened audio.
     duration_s : float
         Length of audio searched.
+    front_hz : float
+        Frequency that leads a front: the top of the analysed band.
     """
 
     time_s: NDArray[np.float64]
     amplitude: NDArray[np.float64]
     duration_s: float
+    front_hz: float = 11_000.0
 
     @property
     def rate_hz(self) -> float:
@@ -42,11 +45,11 @@ class SfericCatalogue:
 
     def shifted(self, by_s: float) -> SfericCatalogue:
         """Return the same sferics on a clock `by_s` later."""
-        return SfericCatalogue(self.time_s + by_s, self.amplitude, self.duration_s)
+        return SfericCatalogue(self.time_s + by_s, self.amplitude, self.duration_s, self.front_hz)
 
 
 def catalogue_sferics(
-    whitened: NDArray[np.float32], *, sample_rate_hz: float
+    whitened: NDArray[np.float32], *, sample_rate_hz: float, front_hz: float = 11_000.0
 ) -> tuple[SfericCatalogue, NDArray[np.bool_]]:
     """Return the sferics in whitened audio and the samples they spoil.
 
@@ -56,6 +59,8 @@ def catalogue_sferics(
         Audio of unit robust variance.
     sample_rate_hz : float
         Its rate.
+    front_hz : float
+        Top of the analysed band, with its skirt.
 
     Returns
     -------
@@ -74,7 +79,7 @@ def catalogue_sferics(
     amplitude = np.array([part.max() for part in parts])
     lead = [int(np.argmax(part > FRONT_SHARE * part.max())) for part in parts]
     time_s = (starts + np.array(lead, int)) / sample_rate_hz
-    catalogue = SfericCatalogue(time_s, amplitude, len(whitened) / sample_rate_hz)
+    catalogue = SfericCatalogue(time_s, amplitude, len(whitened) / sample_rate_hz, front_hz)
     return catalogue, marked
 
 
@@ -93,17 +98,18 @@ CAUSE_STRONGER = 0.7  # in ln amplitude: strokes that make whistlers are the str
 READING_SD_S = 0.0005  # of a front on the whitened audio
 
 
-FRONT_HZ = 11_000.0  # what leads in the whitened audio: the top of the analysed band
 GUIDE_HEIGHT_M = 85e3  # at night (published tweek heights: 80-91 km)
 
 
-def front_lag_s(path_s: float) -> float:
+def front_lag_s(path_s: float, *, front_hz: float) -> float:
     r"""Return how late a catalogued front is behind a signal at the speed of light.
 
     Parameters
     ----------
     path_s : float
         Way through the Earth-ionosphere waveguide at the speed of light, s.
+    front_hz : float
+        Frequency that leads, above the cutoff.
 
     Returns
     -------
@@ -118,11 +124,13 @@ def front_lag_s(path_s: float) -> float:
 
     Examples
     --------
-    >>> f"{1e3 * front_lag_s(0.040):.2f} ms"
+    >>> f"{1e3 * front_lag_s(0.040, front_hz=11_000.0):.2f} ms"
     '0.52 ms'
     """
     cutoff_hz = SPEED_OF_LIGHT_M_S / (2.0 * GUIDE_HEIGHT_M)
-    return float(path_s * ((1.0 - (cutoff_hz / FRONT_HZ) ** 2) ** -0.5 - 1.0))
+    return float(
+        path_s * ((1.0 - (cutoff_hz / max(front_hz, 1.05 * cutoff_hz)) ** 2) ** -0.5 - 1.0)
+    )
 
 
 @dataclass(frozen=True)

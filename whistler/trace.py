@@ -50,6 +50,10 @@ class Trace:
     time_s: NDArray[np.float64]
     time_sd_s: NDArray[np.float64]
 
+    def only(self, kept: NDArray[np.bool_]) -> Trace:
+        """Return the trace with only some of its points."""
+        return Trace(self.frequency_hz[kept], self.time_s[kept], self.time_sd_s[kept])
+
 
 @dataclass(frozen=True)
 class Straightened:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -11,7 +10,7 @@ from fieldlines import ChapmanLayer, FieldLineModel
 from fieldlines.constants import SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
 from whistler.fit import StrokeFit, fit_stroke
-from whistler.problem import PathTrace, Ties
+from whistler.problem import Ties
 from whistler.settings import Settings
 
 # One-sigmas of ln L and ln density beyond which the numbers are not those of the trace. Where a
@@ -19,12 +18,14 @@ from whistler.settings import Settings
 # and the smallest ones come with the largest errors: what is let through must lie well below.
 UNDETERMINED_LOG_L = 0.05
 UNDETERMINED_LOG_DENSITY = 0.3
+MISFIT = 25.0  # chi-square per degree of freedom: points five of their sigmas off
+TIE_MISFIT = 5.0  # sigmas
+SMALLEST_SHARE = 0.3  # of a layer's frequency or height that a variation leaves
 LEANING = 2.0  # a fit that leans on the density prior may be so many times as wide
 
 
 def profile_covariance(
     fit: StrokeFit,
-    traces: Sequence[PathTrace],
     *,
     model: FieldLineModel,
     ties: Ties,
@@ -36,8 +37,6 @@ def profile_covariance(
     ----------
     fit : StrokeFit
         The fit under the default model.
-    traces : list of PathTrace
-        What was fitted.
     model : fieldlines.FieldLineModel
         The default model.
     ties : Ties
@@ -56,7 +55,7 @@ def profile_covariance(
     for low, high in _model_pairs(model, ties, settings):
         ends = [
             fit_stroke(
-                traces,
+                fit.used,
                 start=start,
                 lightning_time_s=fit.lightning_time_s,
                 model=varied,
@@ -105,11 +104,14 @@ def _model_pairs(
 
 
 def _shifted(layer: ChapmanLayer, name: str, by: float) -> ChapmanLayer:
-    return replace(layer, **{name: max(getattr(layer, name) + by, 1e5)})
+    value = getattr(layer, name)
+    return replace(layer, **{name: max(value + by, SMALLEST_SHARE * value)})
 
 
-def uncertainty_status(fit: StrokeFit, path: int, *, width: float = 1.0) -> str:
-    """Return ``ok``, ``at-bound`` or ``undetermined`` for one path of a fit.
+def uncertainty_status(
+    fit: StrokeFit, path: int, *, l_range: tuple[float, float], leniency: float = 1.0
+) -> str:
+    """Return ``ok``, ``at-bound``, ``misfit`` or ``undetermined`` for one path of a fit.
 
     Parameters
     ----------
@@ -117,11 +119,22 @@ def uncertainty_status(fit: StrokeFit, path: int, *, width: float = 1.0) -> str:
         The fit.
     path : int
         Index of the path.
-    width : float
+    l_range : tuple of float
+        L outside which nothing was searched.
+    leniency : float
         Factor on the sigmas from which a number counts as undetermined.
+
+    Returns
+    -------
+    str
+        ``misfit`` where the points, or the ties, lie many of their sigmas off the model: no sigma
+        scaled up to cover that means anything.
     """
-    if fit.at_bound[path]:
+    inside = l_range[0] <= np.exp(fit.log_l[path]) <= l_range[1]
+    if fit.at_bound[path] or not inside:
         return "at-bound"
+    if fit.chi_square > MISFIT * fit.freedom or fit.tie_misfit > TIE_MISFIT:
+        return "misfit"
     sd = np.sqrt(np.diag(fit.covariance)[2 * path : 2 * path + 2])
-    limits = width * np.array([UNDETERMINED_LOG_L, UNDETERMINED_LOG_DENSITY])
+    limits = leniency * np.array([UNDETERMINED_LOG_L, UNDETERMINED_LOG_DENSITY])
     return "ok" if np.isfinite(sd).all() and np.all(sd <= limits) else "undetermined"

@@ -56,7 +56,7 @@ def sferics(heard_s: list[float], *, rate_hz: float, seed: int = 1) -> SfericCat
 def heard_s(lightning_time_s: float, l_values: list[float]) -> float:
     """When the front of a conjugate stroke's sferic is read."""
     way_s = sferic_path_s(np.array(l_values))
-    return lightning_time_s + way_s + front_lag_s(way_s)
+    return lightning_time_s + way_s + front_lag_s(way_s, front_hz=11_000.0)
 
 
 @pytest.fixture

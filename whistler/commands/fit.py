@@ -3,12 +3,16 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
 from whistler.commands import common
 from whistler.errors import printable
+
+if TYPE_CHECKING:
+    from whistler.rows import WhistlerRow
+    from whistler.settings import Settings
 
 
 def fit(
@@ -60,34 +64,46 @@ def fit(
         write_catalogue,
     )
     from whistler.clock import parse_time
-    from whistler.commands.table import legend, rows_table
     from whistler.pickfit import fit_picks
     from whistler.picks import read_picks
 
-    settings = common.build_settings(station=station)
-    common.require_hops(hops)
+    ties: dict[str, Any] = {
+        "hops": hops,
+        "sferic_time_s": sferic_time,
+        "sferic_time_sd_s": sferic_time_sd,
+        "lightning_time_s": lightning_time,
+        "l_value": l_value,
+    }
+    settings = _settings(station, date=date, **ties)
     zero = parse_time(date) if date else None
     traces = read_picks(picks)
     if out is not None:
         prepare_output(out, paths=[str(picks)], settings=settings, overwrite=overwrite)
-    rows = fit_picks(
-        traces,
-        settings=settings,
-        recording=str(picks),
-        hops=hops,
-        start_time=zero,
-        sferic_time_s=sferic_time,
-        sferic_time_sd_s=sferic_time_sd,
-        lightning_time_s=lightning_time,
-        l_value=l_value,
-    )
+    rows = fit_picks(traces, settings=settings, recording=str(picks), start_time=zero, **ties)
     item = picks_entry(str(picks), rows, start_time=zero)
     if out is not None:
         write_catalogue(out, [item], settings=settings)
     if json:
         print(json_text(document([item], settings), indent=1))
     else:
-        print(rows_table(rows))
-        print(f"\n{legend()}")
-        if out is not None:
-            print(f"\nsaved in {printable(str(out))}: catalogue.csv")
+        _show(rows, out)
+
+
+def _settings(station: Path | None, **told: Any) -> Settings:
+    """Return settings that remember what the fit was told, after checking it."""
+    common.require_hops(told["hops"])
+    common.require_finite(
+        sferic_time=told["sferic_time_s"],
+        sferic_time_sd=told["sferic_time_sd_s"],
+        lightning_time=told["lightning_time_s"],
+    )
+    return common.build_settings(station=station, options=tuple(told.items()))
+
+
+def _show(rows: list[WhistlerRow], out: Path | None) -> None:
+    from whistler.commands.table import legend, rows_table
+
+    print(rows_table(rows))
+    print(f"\n{legend()}")
+    if out is not None:
+        print(f"\nsaved in {printable(str(out))}: catalogue.csv")

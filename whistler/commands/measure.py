@@ -29,6 +29,8 @@ def measure(
     channel: common.ChannelOption = "1",
     false_alarms: common.FalseAlarmsOption = 1.0,
     max_hops: common.MaxHopsOption = 5,
+    density_prior: common.DensityPriorOption = "saturated",
+    density_factor: common.DensityFactorOption = 1.0,
     figures: Annotated[bool, typer.Option(help="One figure a recording, with --out.")] = True,
     overwrite: common.OverwriteOption = False,
     quiet: common.QuietOption = False,
@@ -44,7 +46,13 @@ def measure(
     from whistler.clock import parse_time
 
     settings = common.build_settings(
-        station=station, channel=channel, false_alarms_per_hour=false_alarms, max_hops=max_hops
+        station=station,
+        channel=channel,
+        false_alarms_per_hour=false_alarms,
+        max_hops=max_hops,
+        density_prior=density_prior,
+        density_prior_factor=density_factor,
+        options=(("start", start),) if start else (),
     )
     began = parse_time(start) if start else None
     paths = list(dict.fromkeys(recordings))

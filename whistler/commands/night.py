@@ -19,6 +19,8 @@ def night(
     channel: common.ChannelOption = "1",
     false_alarms: common.FalseAlarmsOption = 1.0,
     max_hops: common.MaxHopsOption = 5,
+    density_prior: common.DensityPriorOption = "saturated",
+    density_factor: common.DensityFactorOption = 1.0,
     overwrite: common.OverwriteOption = False,
     quiet: common.QuietOption = False,
     verbose: common.VerboseOption = False,
@@ -32,7 +34,12 @@ def night(
     from whistler.night import measure_night
 
     settings = common.build_settings(
-        station=station, channel=channel, false_alarms_per_hour=false_alarms, max_hops=max_hops
+        station=station,
+        channel=channel,
+        false_alarms_per_hour=false_alarms,
+        max_hops=max_hops,
+        density_prior=density_prior,
+        density_prior_factor=density_factor,
     )
     if not folder.is_dir():
         raise UsageError(Notice("E605", str(folder), "not a folder", "name a folder of recordings"))
