@@ -16,6 +16,7 @@ from whistler.problem import PathTrace
 from whistler.search import Candidate, reference_delay_s
 from whistler.spectrogram import Spectrogram
 from whistler.trace import (
+    SUB_BAND_HZ,
     Curve,
     Trace,
     TraceReading,
@@ -29,6 +30,7 @@ WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
 LEAST_SPAN_HZ = 1500.0
 LEAST_POINTS = 6
+MANY_BANDS = 10  # that even a narrow band is split into
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 WEAK_SHARE = 0.1  # of the power of the strong sub-bands, below which one does not count
 MOST_MOVED_S = 0.05  # between the curve that was found and the one that was followed
@@ -130,7 +132,13 @@ def follow(
     reading = None
     for number, window_s in enumerate(windows_s):
         band_hz = candidate.band_hz if number == 0 else _full_band(path, spectrogram, model)
-        view = straighten(audio, path.curve(model), band_hz=band_hz, reach_s=WIDEST_S)
+        view = straighten(
+            audio,
+            path.curve(model),
+            band_hz=band_hz,
+            spacing_hz=min(SUB_BAND_HZ, (band_hz[1] - band_hz[0]) / MANY_BANDS),
+            reach_s=WIDEST_S,
+        )
         if view is None:
             return None
         if number > 0:
