@@ -12,11 +12,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 from scipy import fft, ndimage
 
 from fieldlines.errors import FloatArray
-from whistler.trace import Straightened
+from whistler.trace import Straightened, peak_offset
 
 GRID_S = 1e-4
 GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
@@ -131,18 +130,10 @@ def _common_shifts(patterns: FloatArray, search_s: float) -> tuple[FloatArray, F
         score = fft.irfft(spectra * np.conj(others), padded, axis=1)[:, lags]
         scale = np.sqrt((np.abs(spectra) ** 2).mean(axis=1)) * norm
         at = np.argmax(score, axis=1)
-        shift = lags[at] + _between(score, at)
+        shift = lags[at] + peak_offset(score, at)
         correlation = score[np.arange(count), at] / np.maximum(scale, 1e-30)
         shift = shift - np.average(shift, weights=np.maximum(correlation, 1e-3) ** 2)
     return shift * GRID_S, np.clip(correlation, 0.0, 1.0)
-
-
-def _between(score: FloatArray, at: NDArray[np.int64]) -> FloatArray:
-    rows = np.arange(len(score))
-    middle = np.clip(at, 1, score.shape[1] - 2)
-    left, centre, right = (score[rows, middle + k] for k in (-1, 0, 1))
-    bend = left - 2 * centre + right
-    return np.where(bend < 0, 0.5 * (left - right) / np.where(bend < 0, bend, 1.0), 0.0)
 
 
 def _shape(

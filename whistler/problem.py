@@ -19,7 +19,9 @@ from whistler.trace import Trace
 
 TIME_UNIT_S = 1e-3
 L_LIMITS = (1.25, 7.5)
-DENSITY_LIMIT = 150.0  # factor either side of the climatology at L 3.2: room for five hops as one
+DENSITY_LIMIT = (
+    1000.0  # factor either side of the climatology at L 3.2: troughs, and five hops as one
+)
 MIDDLE_L = 3.2
 
 

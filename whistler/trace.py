@@ -235,7 +235,7 @@ def read_trace(
     at = np.argmax(part, axis=1)
     peak = part[np.arange(len(part)), at]
     edge = (at == 0) | (at == part.shape[1] - 1)
-    lag = view.lag_s[inside][at] + _parabola(part, at) * step_s
+    lag = view.lag_s[inside][at] + peak_offset(part, at) * step_s
     independent = 1.0 + np.sqrt(4 * np.pi) * kernel_s * view.band_width_hz
     # Averaging over the thickness lowers the chance peaks: the same margin in sigmas of the mean.
     needed = 1.0 + (LEAST_SNR - 1.0) / np.sqrt(independent)
@@ -248,7 +248,21 @@ def read_trace(
     return TraceReading(trace, peak[kept], thickness_s)
 
 
-def _parabola(part: NDArray[np.float64], at: NDArray[np.int64]) -> NDArray[np.float64]:
+def peak_offset(part: NDArray[np.float64], at: NDArray[np.int64]) -> NDArray[np.float64]:
+    """Return where a parabola through each row's peak and its neighbours has its top.
+
+    Parameters
+    ----------
+    part : ndarray, shape (rows, n)
+        Sampled curves.
+    at : ndarray, shape (rows,)
+        Place of each one's largest sample.
+
+    Returns
+    -------
+    ndarray, shape (rows,)
+        Offset from that sample, -0.5 to 0.5 samples.
+    """
     rows = np.arange(len(part))
     middle = np.clip(at, 1, part.shape[1] - 2)
     left, centre, right = (part[rows, middle + k] for k in (-1, 0, 1))

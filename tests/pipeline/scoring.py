@@ -247,7 +247,7 @@ def quantile(error: np.ndarray, share: float) -> float:
     return float(np.quantile(np.abs(error), share, method="inverted_cdf"))
 
 
-def coverage(pull: np.ndarray, sigmas: float) -> float:
+def coverage(pull: Sequence[float] | np.ndarray, sigmas: float) -> float:
     """Share of pulls within so many sigmas."""
     return float(np.mean(np.abs(pull) <= sigmas))
 
