@@ -252,6 +252,56 @@ def coverage(pull: Sequence[float] | np.ndarray, sigmas: float) -> float:
     return float(np.mean(np.abs(pull) <= sigmas))
 
 
+@dataclass(frozen=True)
+class Figure:
+    """A measured number beside what is promised: between `low` and `high`, both included."""
+
+    name: str
+    value: float
+    low: float = -math.inf
+    high: float = math.inf
+    unit: str = "%"
+
+    @property
+    def kept(self) -> bool:
+        """Whether the promise is kept; what could not be measured does not keep it."""
+        return self.low <= self.value <= self.high
+
+    @property
+    def target(self) -> str:
+        """The promise in words; a dash for what is information only."""
+        if math.isfinite(self.low) and math.isfinite(self.high):
+            return f"{self.low:g} to {self.high:g} {self.unit}"
+        if math.isfinite(self.low):
+            return f"at least {self.low:g} {self.unit}"
+        return f"at most {self.high:g} {self.unit}" if math.isfinite(self.high) else "-"
+
+    def __str__(self) -> str:
+        """Return one line."""
+        return f"{self.name}: {self.value:.3g} {self.unit} ({self.target})"
+
+
+def promised(summary: Summary) -> list[Figure]:
+    """The figures of a campaign that are promised, in per cent."""
+    l_error, density_error = summary.l_error, summary.density_error
+    pulls = dict(zip(("L", "density"), summary.pulls(), strict=True))
+    figures = [
+        Figure("traces found", 100 * summary.found_share, low=95),
+        Figure("hop order right", 100 * summary.hops_share, low=95),
+        Figure("error of L, median", 100 * quantile(l_error, 0.5), high=1),
+        Figure("error of L, 90th percentile", 100 * quantile(l_error, 0.9), high=4),
+        Figure("error of density, median", 100 * quantile(density_error, 0.5), high=4),
+        Figure("error of density, 90th percentile", 100 * quantile(density_error, 0.9), high=15),
+        Figure("identified sferics within 5 ms", 100 * summary.sferic_share, low=90),
+    ]
+    for name, pull in pulls.items():
+        figures += [
+            Figure(f"{name} within one sigma", 100 * coverage(pull, 1.0), low=58, high=80),
+            Figure(f"{name} within 1.96 sigma", 100 * coverage(pull, 1.96), low=90),
+        ]
+    return figures
+
+
 def problems(summary: Summary) -> list[str]:
     """One line for every missed, mistaken or far-off trace, with the seed that makes it again."""
     lines = []
