@@ -21,7 +21,7 @@ from whistler.problem import FREE, TIME_UNIT_S, PathTrace, StrokeProblem, Ties
 ROBUST_SCALE = 3.0
 TOLERANCE = 1e-7  # looser stops half-way along the ridge of L and density
 OUTLIER_SIGMA = 4.5
-SMALL_SAMPLE = 1.5  # a misfit known from few points is itself uncertain (as Student's t allows for)
+SMALL_SAMPLE = 2.5  # a misfit known from few points is itself uncertain (as Student's t allows for)
 LEAST_POINTS = 4  # that a trace must keep when outliers are dropped
 
 

@@ -23,7 +23,7 @@ POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
 CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
-LAG_SD = 0.28  # in units of one over the band width; measured on synthetic ducts
+LAG_SD = 0.3  # in units of one over the band width; measured on synthetic ducts
 
 
 @dataclass(frozen=True)
