@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +32,8 @@ LEAST_SPAN_HZ = 1500.0
 LEAST_POINTS = 6
 MANY_BANDS = 10  # that even a narrow band is split into
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
+WIDEST_GAP = 2.5  # inside a trace, in sub-bands
+FEWEST_TIMED = 4
 WEAK_SHARE = 0.1  # of the power of the strong sub-bands, below which one does not count
 MOST_MOVED_S = 0.05  # between the curve that was found and the one that was followed
 OUTSIDE_BANK = 1.7  # factor below the bank's densities from which a fit is something else
@@ -149,6 +151,7 @@ def follow(
             window_s=max(window_s, min(2.5 * (thickness_s or 0.0), WIDEST_S)),
             thickness_s=thickness_s if (thickness_s or 0.0) > DIFFUSE_S else None,
         )
+        reading = None if reading is None else _in_one_piece(reading)
         if reading is None:
             return None
         fit, path = _refit(reading.trace, path, model)
@@ -196,6 +199,18 @@ def _as_found(candidate: Candidate, path: OneHop, model: FieldLineModel) -> bool
     moved_s = path.curve(model)(candidate.frequency_hz[inside]) - candidate.curve_s[inside]
     thinnest = float(saturated_density(path.l_value)) / DENSITY_SPREAD / OUTSIDE_BANK
     return bool(np.median(np.abs(moved_s)) <= MOST_MOVED_S and path.density_m3 >= thinnest)
+
+
+def _in_one_piece(reading: TraceReading) -> TraceReading | None:
+    """The longest run of points: chance peaks far above a trace's band would decide its L."""
+    trace = reading.trace
+    spacing_hz = float(np.min(np.diff(trace.frequency_hz)))
+    gaps = np.flatnonzero(np.diff(trace.frequency_hz) > WIDEST_GAP * spacing_hz) + 1
+    run = max(np.split(np.arange(len(trace.frequency_hz)), gaps), key=len)
+    if len(run) < FEWEST_TIMED:
+        return None
+    own = Trace(trace.frequency_hz[run], trace.time_s[run], trace.time_sd_s[run])
+    return replace(reading, trace=own, snr=reading.snr[run])
 
 
 def _borne_out(reading: TraceReading) -> bool:
