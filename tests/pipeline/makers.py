@@ -91,6 +91,7 @@ def in_noise(wave: np.ndarray, *, cell_snr_db: float, generator: np.random.Gener
     window = np.hanning(512)
     frames = np.lib.stride_tricks.sliding_window_view(wave, 512)[::48]
     power = np.abs(np.fft.rfft(frames * window, axis=1)) ** 2
-    ridge = np.median(power.max(axis=0)[28:185])  # 1.3 to 8.7 kHz
+    ridge = power.max(axis=0)
+    ridge = np.median(ridge[ridge > 0.01 * ridge.max()])  # in the band of the wave
     scale = np.sqrt(10 ** (cell_snr_db / 10) * np.sum(window**2) / ridge)
     return clean_audio(scale * wave + generator.standard_normal(len(wave)))
