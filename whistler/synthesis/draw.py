@@ -45,6 +45,12 @@ class Campaign:
         Background sferics a second.
     medium : Medium
         What the whistlers travel through.
+    path_shares, hop_shares : tuple of float
+        How often one, two or three paths are lit, and each of `HOP_CHOICES`.
+    pause_range_s : tuple of float
+        Uniform range of the pause between the end of one stroke's traces and the next stroke, s.
+    high_hz : float or None
+        Upper band limit where half the equatorial gyrofrequency is above it; None is 9.5 kHz.
     """
 
     l_range: tuple[float, float] = (2.2, 4.6)
@@ -56,6 +62,10 @@ class Campaign:
     hidden_share: float = 0.1
     sferic_rate_hz: float = 20.0
     medium: Medium = field(default_factory=Medium)
+    path_shares: tuple[float, ...] = (0.6, 0.25, 0.15)
+    hop_shares: tuple[float, ...] = HOP_SHARES
+    pause_range_s: tuple[float, float] = (0.2, 2.0)
+    high_hz: float | None = None
 
 
 def draw_scene(
@@ -101,7 +111,7 @@ def draw_scene(
         if end_s + 0.3 > duration_s:
             break
         strokes.append(stroke)
-        time_s = end_s + generator.uniform(0.2, 2.0)
+        time_s = end_s + generator.uniform(*ranges.pause_range_s)
     return Scene(
         duration_s=duration_s,
         sample_rate_hz=sample_rate_hz,
@@ -135,9 +145,9 @@ def draw_stroke(
     Stroke
         Its paths share the hops and their density's departure from the climatology.
     """
-    hops = HOP_CHOICES[int(generator.choice(len(HOP_CHOICES), p=HOP_SHARES))]
+    hops = HOP_CHOICES[int(generator.choice(len(HOP_CHOICES), p=campaign.hop_shares))]
     most_paths = 3 if len(hops) == 1 else 2
-    count = int(generator.choice([1, 2, 3], p=[0.6, 0.25, 0.15]))
+    count = int(generator.choice([1, 2, 3], p=campaign.path_shares))
     common_dex = generator.normal(0.0, campaign.density_sd_dex)
     low_hz = float(generator.uniform(*campaign.low_range_hz))
     paths = [
@@ -204,6 +214,10 @@ def _draw_path(
     lowest_db, highest_db = campaign.snr_range_db
     weakest_first_db = min(lowest_db + loss_db * (hops[-1] - hops[0]), highest_db)
     spread = np.exp(generator.uniform(*np.log(campaign.spread_range_s)))
+    high_hz = campaign.high_hz
+    if high_hz is not None:
+        dipole = campaign.medium.field_line_model().dipole
+        high_hz = min(high_hz, round(0.5 * dipole.equatorial_gyrofrequency(l_value), 1))
     return Path(
         l_value=l_value,
         equatorial_density_cm3=round(density_cm3, 2),
@@ -211,6 +225,7 @@ def _draw_path(
         hops=hops,
         hop_loss_db=round(loss_db, 2),
         frequency_low_hz=round(low_hz * float(np.exp(generator.normal(0.0, 0.05))), 1),
+        frequency_high_hz=high_hz,
         tilt_db_per_octave=round(float(generator.normal(0.0, 1.5)), 2),
         spread_s=round(float(spread), 5),
         fading_depth=round(float(generator.uniform(0.1, 0.5)), 2),
