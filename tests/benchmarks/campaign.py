@@ -19,7 +19,6 @@ from __future__ import annotations
 
 import argparse
 import json
-import math
 import os
 import statistics
 import subprocess
@@ -27,15 +26,14 @@ import sys
 import tempfile
 import time
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict
 from pathlib import Path
 
 import numpy as np
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "pipeline"))
 
+from promises import Figure, plain, table
 from scoring import (
-    Figure,
     Scored,
     Summary,
     campaign_scene,
@@ -163,25 +161,6 @@ def astray(summary: Summary) -> Iterator[Figure]:
         yield Figure(f"error of {name}, 90th percentile", 100 * quantile(error, 0.9))
         yield Figure(f"{name} within one combined sigma", 100 * coverage(pulls[name], 1.0))
         yield Figure(f"{name} within 1.96 combined sigma", 100 * coverage(pulls[name], 1.96))
-
-
-def plain(figure: Figure) -> dict[str, object]:
-    """Return a figure for strict JSON: what is not finite is null."""
-    values = {**asdict(figure), "kept": figure.kept}
-    return {
-        name: None if isinstance(value, float) and not math.isfinite(value) else value
-        for name, value in values.items()
-    }
-
-
-def table(title: str, figures: Sequence[Figure]) -> str:
-    """Return figures as a Markdown table."""
-    lines = [f"### {title}", "", "| figure | measured | target | |", "|---|---|---|---|"]
-    for figure in figures:
-        mark = "" if figure.target == "-" else "kept" if figure.kept else "**missed**"
-        value = f"{figure.value:.3g} {figure.unit}".strip()
-        lines.append(f"| {figure.name} | {value} | {figure.target.strip()} | {mark} |")
-    return "\n".join([*lines, ""])
 
 
 def main() -> int:

@@ -20,6 +20,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+from promises import Figure
 from scipy.optimize import linear_sum_assignment
 
 from whistler.measure import measure_recording
@@ -252,35 +253,6 @@ def coverage(pull: Sequence[float] | np.ndarray, sigmas: float) -> float:
     return float(np.mean(np.abs(pull) <= sigmas))
 
 
-@dataclass(frozen=True)
-class Figure:
-    """A measured number beside what is promised: between `low` and `high`, both included."""
-
-    name: str
-    value: float
-    low: float = -math.inf
-    high: float = math.inf
-    unit: str = "%"
-
-    @property
-    def kept(self) -> bool:
-        """Whether the promise is kept; what could not be measured does not keep it."""
-        return self.low <= self.value <= self.high
-
-    @property
-    def target(self) -> str:
-        """The promise in words; a dash for what is information only."""
-        if math.isfinite(self.low) and math.isfinite(self.high):
-            return f"{self.low:g} to {self.high:g} {self.unit}"
-        if math.isfinite(self.low):
-            return f"at least {self.low:g} {self.unit}"
-        return f"at most {self.high:g} {self.unit}" if math.isfinite(self.high) else "-"
-
-    def __str__(self) -> str:
-        """Return one line."""
-        return f"{self.name}: {self.value:.3g} {self.unit} ({self.target})"
-
-
 def promised(summary: Summary) -> list[Figure]:
     """The figures of a campaign that are promised, in per cent."""
     l_error, density_error = summary.l_error, summary.density_error
@@ -302,34 +274,45 @@ def promised(summary: Summary) -> list[Figure]:
     return figures
 
 
+def describe_pair(pair: Pair) -> str:
+    """One line on a true trace and what was measured of it, with the seed that makes it again."""
+    truth, row = pair.truth, pair.row
+    head = (
+        f"seed {pair.seed} group {truth.group}: L {truth.l_value:.2f} "
+        f"n {truth.equatorial_density_cm3:.0f} hops {truth.hops} {truth.snr_db:.1f} dB "
+        f"spread {1e3 * truth.spread_s:.1f} ms at {truth.lightning_time_s:.2f} s"
+    )
+    if row is None:
+        return f"{head}: missed"
+    return (
+        f"{head}: measured L {100 * _relative(row.l_value, truth.l_value):+.1f} % "
+        f"n {100 * _relative(row.equatorial_density_cm3, truth.equatorial_density_cm3):+.1f} % "
+        f"hops {row.hops}, sferic {row.sferic_time_s - truth.sferic_time_s:+.4f} s "
+        f"{'seen' if row.sferic_seen else 'predicted'} (heard {truth.sferic_seen}), "
+        f"L sd {row.l_value_sd:.3f}, {row.uncertainty_status}"
+    )
+
+
+def describe_extra(row: WhistlerRow) -> str:
+    """One line on a row without a true trace."""
+    return (
+        f"extra row in {row.recording.rsplit('/', 1)[-1]}: L {row.l_value:.2f} "
+        f"hops {row.hops} sferic {row.sferic_time_s:.2f} s, {row.snr_db:.0f} dB, "
+        f"{row.frequency_low_hz:.0f}-{row.frequency_high_hz:.0f} Hz, "
+        f"significance {row.significance:.2g}"
+    )
+
+
 def problems(summary: Summary) -> list[str]:
     """One line for every missed, mistaken or far-off trace, with the seed that makes it again."""
     lines = []
     for pair in summary.pairs:
         truth, row = pair.truth, pair.row
-        head = (
-            f"seed {pair.seed} group {truth.group}: L {truth.l_value:.2f} "
-            f"n {truth.equatorial_density_cm3:.0f} hops {truth.hops} {truth.snr_db:.0f} dB "
-            f"spread {1e3 * truth.spread_s:.1f} ms at {truth.lightning_time_s:.2f} s"
+        mistaken = row is None or (
+            row.hops != truth.hops
+            or abs(_relative(row.l_value, truth.l_value)) > 0.04
+            or (row.sferic_seen and abs(row.sferic_time_s - truth.sferic_time_s) > SFERIC_S)
         )
-        if row is None:
-            lines.append(f"{head}: missed")
-            continue
-        l_error = _relative(row.l_value, truth.l_value)
-        density_error = _relative(row.equatorial_density_cm3, truth.equatorial_density_cm3)
-        wrong_sferic = row.sferic_seen and abs(row.sferic_time_s - truth.sferic_time_s) > SFERIC_S
-        if row.hops != truth.hops or abs(l_error) > 0.04 or wrong_sferic:
-            lines.append(
-                f"{head}: measured L {100 * l_error:+.1f} % n {100 * density_error:+.1f} % "
-                f"hops {row.hops}, sferic {row.sferic_time_s - truth.sferic_time_s:+.4f} s "
-                f"{'seen' if row.sferic_seen else 'predicted'} (heard {truth.sferic_seen}), "
-                f"L sd {row.l_value_sd:.3f}, {row.uncertainty_status}"
-            )
-    for row in summary.extra:
-        lines.append(
-            f"extra row in {row.recording.rsplit('/', 1)[-1]}: L {row.l_value:.2f} "
-            f"hops {row.hops} sferic {row.sferic_time_s:.2f} s, {row.snr_db:.0f} dB, "
-            f"{row.frequency_low_hz:.0f}-{row.frequency_high_hz:.0f} Hz, "
-            f"significance {row.significance:.2g}"
-        )
-    return lines
+        if mistaken:
+            lines.append(describe_pair(pair))
+    return [*lines, *map(describe_extra, summary.extra)]

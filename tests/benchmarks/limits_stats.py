@@ -1,0 +1,118 @@
+"""Shares, curves and rates with their intervals, for the campaign of the limits."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+from promises import Figure
+from scipy.stats import beta, chi2
+
+CONFIDENCE = 0.95
+RESAMPLES = 400
+STEPS = 60  # Newton steps; a dozen are enough where the curve is determined
+PRIOR = 0.01  # weak pull of the slope to 0, so that separated samples have a finite curve
+
+
+@dataclass(frozen=True)
+class Curve:
+    """Share found as a logistic function of strength: half at `half_db`, width `width_db`."""
+
+    half_db: float
+    width_db: float
+
+    def strength_db(self, share: float) -> float:
+        """Strength at which this share is found."""
+        return self.half_db + self.width_db * math.log(share / (1.0 - share))
+
+    def share(self, strength_db: float) -> float:
+        """Share found at a strength."""
+        return 1.0 / (1.0 + math.exp(-(strength_db - self.half_db) / self.width_db))
+
+
+def logistic(strength_db: np.ndarray, found: np.ndarray) -> Curve:
+    """The most likely logistic curve through found (1) or not (0) against strength."""
+    middle = float(np.mean(strength_db))
+    design = np.column_stack((np.ones(strength_db.size), strength_db - middle))
+    pull = np.diag([0.0, PRIOR])
+    coefficients = np.array([0.0, 0.5])
+    for _ in range(STEPS):
+        share = 1.0 / (1.0 + np.exp(-np.clip(design @ coefficients, -40.0, 40.0)))
+        weight = np.maximum(share * (1.0 - share), 1e-6)
+        slope = design.T @ (found - share) - pull @ coefficients
+        step = np.linalg.solve(design.T @ (weight[:, None] * design) + pull, slope)
+        coefficients += np.clip(step, -2.0, 2.0)
+        if np.abs(step).max() < 1e-8:
+            break
+    return Curve(middle - coefficients[0] / coefficients[1], 1.0 / coefficients[1])
+
+
+def resampled(
+    cluster: np.ndarray, statistic: Callable[[np.ndarray], Sequence[float]], *, seed: int = 1
+) -> list[tuple[float, float]]:
+    """95 % bootstrap intervals of statistics, drawing whole clusters (recordings) anew.
+
+    `statistic` takes indices of the sample, with repetitions.
+    """
+    generator = np.random.default_rng(seed)
+    members = [np.flatnonzero(cluster == one) for one in np.unique(cluster)]
+    values = []
+    for _ in range(RESAMPLES):
+        drawn = generator.integers(len(members), size=len(members))
+        values.append(statistic(np.concatenate([members[k] for k in drawn])))
+    tail = 0.5 * (1.0 - CONFIDENCE)
+    low, high = np.quantile(np.array(values), [tail, 1.0 - tail], axis=0)
+    return [(float(a), float(b)) for a, b in zip(low, high, strict=True)]
+
+
+def exact_interval(hits: int, count: int) -> tuple[float, float]:
+    """95 % Clopper-Pearson interval of a share."""
+    tail = 0.5 * (1.0 - CONFIDENCE)
+    low = float(beta.ppf(tail, hits, count - hits + 1)) if hits else 0.0
+    high = float(beta.ppf(1.0 - tail, hits + 1, count - hits)) if hits < count else 1.0
+    return low, high
+
+
+def share_figure(
+    name: str, hits: Sequence[bool] | np.ndarray, *, low: float = -math.inf, high: float = math.inf
+) -> Figure:
+    """A share in per cent with its exact interval and how many it is of."""
+    listed = np.asarray(hits, dtype=bool)
+    count, right = listed.size, int(listed.sum())
+    if count == 0:
+        return Figure(f"{name} (of 0)", math.nan, low, high)
+    ends = exact_interval(right, count)
+    return Figure(
+        f"{name} ({right} of {count})",
+        100.0 * right / count,
+        low,
+        high,
+        interval=(100.0 * ends[0], 100.0 * ends[1]),
+    )
+
+
+def hourly_figure(name: str, count: int, minutes: float, *, high: float = math.inf) -> Figure:
+    """A number of events per hour with its exact Poisson interval."""
+    hours = minutes / 60.0
+    tail = 0.5 * (1.0 - CONFIDENCE)
+    low = 0.5 * float(chi2.ppf(tail, 2 * count)) if count else 0.0
+    top = 0.5 * float(chi2.ppf(1.0 - tail, 2 * count + 2))
+    return Figure(
+        f"{name} ({count} in {minutes:.0f} min)",
+        count / hours,
+        high=high,
+        unit="per h",
+        interval=(low / hours, top / hours),
+    )
+
+
+def bins(edges: Sequence[float], values: np.ndarray) -> list[tuple[float, float, np.ndarray]]:
+    """Bins from edge to edge with the mask of their values; the last one holds its upper edge."""
+    last = len(edges) - 2
+    return [
+        (low, high, (values >= low) & ((values <= high) if k == last else (values < high)))
+        for k, (low, high) in enumerate(pairwise(edges))
+    ]
