@@ -119,6 +119,27 @@ def clean(block: AudioBlock, *, settings: Settings) -> CleanAudio:
     )
 
 
+def without_mains(block: AudioBlock, *, settings: Settings) -> NDArray[np.float32]:
+    """Return the analysed band of a block without its mains lines, at the block's own rate.
+
+    Parameters
+    ----------
+    block : AudioBlock
+        Audio at any scale.
+    settings : Settings
+        Mains frequency and analysed band.
+
+    Returns
+    -------
+    ndarray, shape (n,), float32
+        What :func:`clean` whitens, in the scale of the block; sferics are still in it.
+    """
+    rate_hz = float(block.sample_rate_hz)
+    size = _plan(rate_hz).size_in
+    audio, _ = _band_limit(block.samples, _BandPlan(size, size, rate_hz), settings)
+    return audio
+
+
 def _top_hz(rate_hz: float, settings: Settings) -> float:
     return min(settings.band_high_hz, 0.47 * rate_hz)
 

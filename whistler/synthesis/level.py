@@ -13,6 +13,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 from scipy import fft
 
 from fieldlines.errors import FloatArray
@@ -21,6 +22,9 @@ from fieldlines.errors import FloatArray
 CELL_S = 1024 / 48_000
 #: Cells that are enough for a median good to 0.1 dB.
 MOST_CELLS = 6000
+#: Share of a cell that may lie on samples left out, and cells kept however few do better.
+LEFT_OUT_SHARE = 0.1
+FEWEST_CELLS = 200
 
 
 @dataclass(frozen=True)
@@ -55,7 +59,12 @@ def hann(size: int) -> FloatArray:
     return np.asarray(0.5 - 0.5 * np.cos(2.0 * np.pi * np.arange(size) / size))
 
 
-def noise_level(background: FloatArray, *, sample_rate_hz: float) -> NoiseLevel:
+def noise_level(
+    background: FloatArray,
+    *,
+    sample_rate_hz: float,
+    left_out: npt.NDArray[np.bool_] | None = None,
+) -> NoiseLevel:
     """Return the noise power of every channel of a background.
 
     Parameters
@@ -64,6 +73,9 @@ def noise_level(background: FloatArray, *, sample_rate_hz: float) -> NoiseLevel:
         Recording without its whistlers.
     sample_rate_hz : float
         Sampling rate.
+    left_out : ndarray of bool, shape (n,), optional
+        Samples that are not noise: cells of which they fill more than a tenth do not count, unless
+        fewer than 200 others are left; then those with the least of them do.
 
     Returns
     -------
@@ -73,6 +85,10 @@ def noise_level(background: FloatArray, *, sample_rate_hz: float) -> NoiseLevel:
     size = cell_length(sample_rate_hz)
     step = max(size // 2, background.size // MOST_CELLS)
     frames = np.lib.stride_tricks.sliding_window_view(background, size)[::step]
+    if left_out is not None:
+        share = np.lib.stride_tricks.sliding_window_view(left_out, size)[::step].mean(axis=1)
+        fewest = np.sort(share)[: min(FEWEST_CELLS, share.size)][-1]
+        frames = frames[share <= max(LEFT_OUT_SHARE, fewest)]
     spectra = fft.rfft(frames * hann(size), axis=1)
     power = np.median(spectra.real**2 + spectra.imag**2, axis=0) / np.log(2.0)
     return NoiseLevel(fft.rfftfreq(size, 1.0 / sample_rate_hz), power)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -72,6 +73,22 @@ class Background:
     sferic_count: int
 
 
+@dataclass(frozen=True)
+class Sounding:
+    """A background with strokes and whistlers in it.
+
+    Parameters
+    ----------
+    samples : ndarray, shape (n,)
+        Noise units.
+    whistlers : tuple of WhistlerTruth
+        In order of stroke, path and hop.
+    """
+
+    samples: FloatArray
+    whistlers: tuple[WhistlerTruth, ...]
+
+
 def render(scene: Scene, generator: np.random.Generator | None = None) -> SyntheticRecording:
     """Return the recording a scene describes.
 
@@ -98,18 +115,15 @@ def render(scene: Scene, generator: np.random.Generator | None = None) -> Synthe
     background_source, *stroke_sources = source.spawn(1 + len(scene.strokes))
     background = render_background(scene, background_source)
     noise = noise_level(background.samples, sample_rate_hz=scene.sample_rate_hz)
-    samples = background.samples.copy()
-    whistlers: list[WhistlerTruth] = []
-    for number, (stroke, one) in enumerate(zip(scene.strokes, stroke_sources, strict=True), 1):
-        whistlers += _add_stroke(samples, scene, stroke, number, noise, one)
-    heard, full_scale = _receive(samples, scene.receiver, scene.sample_rate_hz)
+    sounding = add_strokes(background.samples, scene, noise=noise, sources=stroke_sources)
+    heard, full_scale = _receive(sounding.samples, scene.receiver, scene.sample_rate_hz)
     truth = Truth(
         scene=scene.to_dict(),
         duration_s=scene.frame_count / scene.sample_rate_hz,
         sample_rate_hz=scene.sample_rate_hz,
         full_scale=full_scale,
         sferic_count=background.sferic_count,
-        whistlers=tuple(whistlers),
+        whistlers=sounding.whistlers,
     )
     return SyntheticRecording(heard, scene.sample_rate_hz, truth)
 
@@ -183,6 +197,38 @@ def sferic_distance(stroke: Stroke) -> float:
     mean_l = float(np.mean([path.l_value for path in stroke.paths]))
     latitude = float(np.arccos(np.sqrt(1.0 / mean_l)))
     return max(2.0 * latitude * EARTH_RADIUS_M + stroke.distance_offset_m, 20e3)
+
+
+def add_strokes(
+    background: FloatArray,
+    scene: Scene,
+    *,
+    noise: NoiseLevel,
+    sources: Sequence[np.random.Generator],
+) -> Sounding:
+    """Return a background with the strokes of a scene and all their whistlers added.
+
+    Parameters
+    ----------
+    background : ndarray, shape (n,)
+        Any audio of the scene's length and rate, noise units; left as it is.
+    scene : Scene
+        Strokes, medium, receiver, and in its first sferics the scale of the strokes' own.
+    noise : NoiseLevel
+        What the strengths refer to, in the same units.
+    sources : sequence of numpy.random.Generator
+        One for each stroke.
+
+    Returns
+    -------
+    Sounding
+        A new array, and what is true about it.
+    """
+    samples = background.copy()
+    whistlers: list[WhistlerTruth] = []
+    for number, (stroke, one) in enumerate(zip(scene.strokes, sources, strict=True), 1):
+        whistlers += _add_stroke(samples, scene, stroke, number, noise, one)
+    return Sounding(samples, tuple(whistlers))
 
 
 def _add_stroke(
