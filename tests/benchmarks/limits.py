@@ -21,12 +21,14 @@ from pathlib import Path
 sys.path.insert(0, str(Path(__file__).parent))
 sys.path.insert(0, str(Path(__file__).parents[1] / "pipeline"))
 
+from limits_decoys import decoys
 from limits_run import Options, Part
 from limits_strength import strength
 from promises import plain
 
 PARTS: dict[str, Callable[[Options], Part]] = {
     "strength": strength,
+    "decoys": decoys,
 }
 
 

@@ -13,6 +13,7 @@ from collections.abc import Callable, Iterable, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TypeVar
 
 from promises import Figure, table
 from scoring import Scored, measure_scene
@@ -20,6 +21,8 @@ from scoring import Scored, measure_scene
 from whistler.settings import Settings
 from whistler.synthesis.scene import Scene
 
+Item = TypeVar("Item")
+Result = TypeVar("Result")
 ONE_THREAD = ("NUMBA_NUM_THREADS", "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS")
 
 
@@ -85,20 +88,29 @@ def measure_job(job: Job) -> Scored:
 
 def measure_all(jobs: Sequence[Job], options: Options, *, name: str) -> list[Scored]:
     """All scenes measured, in their order."""
-    results: list[Scored] = []
-    for result in _results(jobs, options.workers):
+    return shared_out(measure_job, jobs, options, name=name)
+
+
+def shared_out(
+    work: Callable[[Item], Result], items: Sequence[Item], options: Options, *, name: str
+) -> list[Result]:
+    """What `work` makes of every item, in their order, by several processes."""
+    results: list[Result] = []
+    for result in _results(work, items, options.workers):
         results.append(result)
-        print(f"\r{name}: {len(results)}/{len(jobs)} recordings", end="", file=sys.stderr)
-    print(file=sys.stderr, flush=True)
+        if len(results) % 10 == 0 or len(results) == len(items):
+            print(f"{name}: {len(results)} of {len(items)}", file=sys.stderr, flush=True)
     return results
 
 
-def _results(jobs: Sequence[Job], workers: int) -> Iterable[Scored]:
+def _results(
+    work: Callable[[Item], Result], items: Sequence[Item], workers: int
+) -> Iterable[Result]:
     if workers <= 1:
-        yield from map(measure_job, jobs)
+        yield from map(work, items)
         return
     # Compiled code reads its number of threads when it is first imported, which the child does.
     os.environ.update(dict.fromkeys(ONE_THREAD, "1"))
     context = multiprocessing.get_context("spawn")
     with ProcessPoolExecutor(workers, mp_context=context) as pool:
-        yield from pool.map(measure_job, jobs)
+        yield from pool.map(work, items)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -12,6 +12,7 @@ from whistler.synthesis.parts import (
     Hiss,
     Mains,
     Noise,
+    Receiver,
     Sferics,
     Transmitter,
 )
@@ -285,6 +286,7 @@ def draw_decoy_scene(
     duration_s: float = 60.0,
     sample_rate_hz: int = 32_000,
     name: str = "decoy",
+    thunder: bool = False,
 ) -> Scene:
     """Return a scene without any whistler but with much that may be taken for one.
 
@@ -298,6 +300,8 @@ def draw_decoy_scene(
         Sampling rate.
     name : str
         Name of the recording.
+    thunder : bool
+        Whether a thunderstorm near by drives the receiver into clipping, too.
 
     Returns
     -------
@@ -311,7 +315,7 @@ def draw_decoy_scene(
     """
     rate_hz = float(np.exp(generator.uniform(np.log(3.0), np.log(80.0))))
     mains = draw_mains(generator)
-    return Scene(
+    scene = Scene(
         duration_s=duration_s,
         sample_rate_hz=sample_rate_hz,
         seed=int(generator.integers(2**31)),
@@ -333,6 +337,11 @@ def draw_decoy_scene(
         chorus=(_draw_chorus(generator),),
         transmitters=(_draw_transmitter(generator),),
     )
+    if not thunder:
+        return scene
+    storm = _draw_thunder(generator)
+    full_scale = round(storm.median_peak * float(generator.uniform(0.3, 1.0)))
+    return replace(scene, sferics=(*scene.sferics, storm), receiver=Receiver(full_scale=full_scale))
 
 
 def _draw_tweek_storm(generator: np.random.Generator, duration_s: float) -> Sferics:
@@ -346,6 +355,16 @@ def _draw_tweek_storm(generator: np.random.Generator, duration_s: float) -> Sfer
         tweek_db=round(float(generator.uniform(-12.0, 0.0)), 1),
         start_s=round(float(generator.uniform(0.0, duration_s - length_s)), 2),
         duration_s=round(length_s, 2),
+    )
+
+
+def _draw_thunder(generator: np.random.Generator) -> Sferics:
+    return Sferics(
+        rate_hz=round(float(np.exp(generator.uniform(np.log(0.3), np.log(4.0)))), 2),
+        median_peak=round(float(np.exp(generator.uniform(np.log(300.0), np.log(3000.0))))),
+        clustering=0.7,
+        near_m=20e3,
+        far_m=200e3,
     )
 
 
