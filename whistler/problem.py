@@ -183,6 +183,28 @@ def sferic_at(
     return lightning_time_s + way_s, by_x
 
 
+def expected_log_density(log_l: float, *, factor: float = 1.0) -> tuple[float, float]:
+    """Return ln of the climatology's density in m^-3 at ln L, and its derivative in ln L.
+
+    Parameters
+    ----------
+    log_l : float
+        ln L.
+    factor : float
+        What the climatology is multiplied with.
+
+    Examples
+    --------
+    >>> expected, slope = expected_log_density(np.log(4.0))
+    >>> f"{np.exp(expected) / 1e6:.0f} per cm^3, to the power {slope:.1f} of L"
+    '443 per cm^3, to the power -2.9 of L'
+    """
+    expected = float(np.log(saturated_density(np.exp(log_l))))
+    # Over a step that the climatology's exponential law allows.
+    above = float(np.log(saturated_density(1.001 * np.exp(log_l))))
+    return expected + float(np.log(factor)), float((above - expected) / np.log(1.001))
+
+
 class StrokeProblem:
     """Residuals and Jacobian of one stroke in scaled unknowns.
 
@@ -307,13 +329,10 @@ class StrokeProblem:
             if ties.l_value is not None:
                 parts.append(_tie(np.log(ties.l_value) - x[first], _unit(self.size, first), HELD))
             if ties.density_prior_dex is not None:
-                expected = np.log(saturated_density(np.exp(x[first])))
-                # d ln n / d ln L of the climatology, over a step that its exponential law allows.
-                step = np.log(saturated_density(1.001 * np.exp(x[first]))) - expected
-                by_x = _unit(self.size, first + 1) - step / np.log(1.001) * _unit(self.size, first)
+                expected, by_l = expected_log_density(x[first], factor=ties.density_prior_factor)
+                by_x = _unit(self.size, first + 1) - by_l * _unit(self.size, first)
                 sd = ties.density_prior_dex * np.log(10.0)
-                expected += np.log(ties.density_prior_factor)
-                parts.append(_tie(float(expected - x[first + 1]), by_x, sd))
+                parts.append(_tie(expected - x[first + 1], by_x, sd))
         return parts
 
     def limits(self) -> tuple[FloatArray, FloatArray]:

@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
-from dataclasses import asdict, dataclass, replace
-
-import numpy as np
+from dataclasses import asdict, dataclass
 
 from fieldlines import (
     DomainError,
@@ -15,14 +14,13 @@ from fieldlines import (
     tube_content,
     zero_frequency_dispersion,
 )
-from fieldlines.errors import FloatArray
 from whistler.evidence import predicted_sferic
-from whistler.fit import StrokeFit, fit_stroke
+from whistler.fit import StrokeFit
 from whistler.group import SURE, Stroke
+from whistler.pathnumbers import PathNumbers, path_numbers, with_fit_prior
 from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN, WhistlerRow
 from whistler.settings import Settings
-from whistler.uncertainty import LEANING, profile_covariance, uncertainty_status
 
 DIFFUSE_S = 0.010  # thickness from which a trace is called diffuse
 AMBIGUOUS = 0.5  # probability of the likeliest sferic from which a doubt is worth a flag
@@ -45,22 +43,6 @@ class Sighting:
     snr_db: float = NAN
     significance: float = NAN
     thickness_s: float = 0.0
-
-
-@dataclass(frozen=True)
-class _PathNumbers:
-    """L and density of one path with all their sigmas; NaN where they are not determined."""
-
-    l_value: float = NAN
-    l_sd: float = NAN
-    l_profile_sd: float = NAN
-    density_m3: float = NAN
-    density_sd_m3: float = NAN
-    density_profile_sd_m3: float = NAN
-    correlation: float = NAN
-    status: str = "undetermined"
-    leaning: StrokeFit | None = None  # the fit the numbers are from, where a prior had to help
-    misfit: bool = False
 
 
 def stroke_rows(
@@ -100,12 +82,8 @@ def stroke_rows(
     list of WhistlerRow
         In the order of the stroke's traces; `time` is left to the caller, who knows the clock.
     """
-    fit = stroke.fit
-    profile = profile_covariance(fit, model=model, ties=ties, settings=settings)
-    numbers = [
-        _path_numbers(stroke, path, profile[path], model, ties, settings)
-        for path in range(len(fit.log_l))
-    ]
+    stroke, ties = with_fit_prior(stroke, ties, model=model, settings=settings)
+    numbers = path_numbers(stroke, model=model, ties=ties, settings=settings)
     return [
         _row(
             stroke,
@@ -126,7 +104,7 @@ def stroke_rows(
 def _row(
     stroke: Stroke,
     number: int,
-    numbers: Sequence[_PathNumbers],
+    numbers: Sequence[PathNumbers],
     sighting: Sighting,
     *,
     recording: str,
@@ -155,9 +133,13 @@ def _row(
         l_value=found.l_value,
         l_value_sd=found.l_sd,
         l_value_profile_sd=found.l_profile_sd,
+        l_value_low=found.l_low,
+        l_value_high=found.l_high,
         equatorial_density_cm3=found.density_m3 / 1e6,
         equatorial_density_sd_cm3=found.density_sd_m3 / 1e6,
         equatorial_density_profile_sd_cm3=found.density_profile_sd_m3 / 1e6,
+        equatorial_density_low_cm3=found.density_low_m3 / 1e6,
+        equatorial_density_high_cm3=found.density_high_m3 / 1e6,
         l_density_correlation=found.correlation,
         frequency_low_hz=float(item.trace.frequency_hz.min()),
         frequency_high_hz=float(item.trace.frequency_hz.max()),
@@ -180,9 +162,11 @@ class _Derived:
     nose_time_s: float = NAN
     equatorial_gyrofrequency_hz: float = NAN
     tube_content_m2: float = NAN
+    tube_content_sd_m2: float = NAN
+    tube_content_profile_sd_m2: float = NAN
 
 
-def _derived(fit: StrokeFit, path: int, found: _PathNumbers, model: FieldLineModel) -> _Derived:
+def _derived(fit: StrokeFit, path: int, found: PathNumbers, model: FieldLineModel) -> _Derived:
     """Derive from the fitted model; D0 is well fixed even where L is not."""
     l_value, density_m3 = fit.start[path]
     try:
@@ -191,90 +175,35 @@ def _derived(fit: StrokeFit, path: int, found: _PathNumbers, model: FieldLineMod
         )
         if found.misfit or fit.at_bound[path]:
             return _Derived()
-        if not np.isfinite(found.l_value):
+        if not math.isfinite(found.l_value):
             return _Derived(dispersion)
         tip = nose(l_value, equatorial_density_m3=density_m3, model=model)
+        content_m2 = tube_content(l_value, equatorial_density_m3=density_m3, model=model)
         return _Derived(
             dispersion,
             tip.frequency_hz,
             tip.time_s,
             maximum_frequency(l_value, model=model),
-            tube_content(l_value, equatorial_density_m3=density_m3, model=model),
+            content_m2,
+            content_m2 * found.log_tube_content_sd,
+            content_m2 * found.log_tube_content_profile_sd,
         )
     except DomainError:  # a fit that ended on a limit may lie outside a formula's range
         return _Derived()
 
 
-def _path_numbers(
-    stroke: Stroke,
-    path: int,
-    profile: FloatArray,
-    model: FieldLineModel,
-    ties: Ties,
-    settings: Settings,
-) -> _PathNumbers:
-    fit = stroke.fit
-    status = uncertainty_status(fit, path, l_range=settings.l_range)
-    l_value, density = fit.start[path]
-    if status == "ok" and stroke.hop_probability < SURE:
-        # The hop order, a factor of four in density and more, hangs on the density prior.
-        return _PathNumbers(l_value=l_value, density_m3=density, status="prior-dominated")
-    if status == "ok":
-        part = fit.covariance[2 * path : 2 * path + 2, 2 * path : 2 * path + 2]
-        l_sd, density_sd = np.sqrt(np.diag(part))
-        free = ties.l_value is None
-        return _PathNumbers(
-            l_value,
-            l_value * float(l_sd) if free else NAN,
-            l_value * float(np.sqrt(profile[0])) if free else NAN,
-            density,
-            density * float(density_sd),
-            density * float(np.sqrt(profile[1])),
-            float(part[0, 1] / (l_sd * density_sd)) if free and l_sd * density_sd > 0 else NAN,
-            status,
-        )
-    if status == "misfit":
-        return _PathNumbers(misfit=True)
-    if status == "at-bound":
-        return _PathNumbers(status=status)
-    return _with_prior(stroke.traces, fit, path, model, ties, settings)
-
-
-def _with_prior(
-    traces: Sequence[PathTrace],
-    fit: StrokeFit,
-    path: int,
-    model: FieldLineModel,
-    ties: Ties,
-    settings: Settings,
-) -> _PathNumbers:
-    """Lean on the climatology where the trace alone is too weak, and say so; no sigma then."""
-    if settings.density_prior == "none":
-        return _PathNumbers()
-    prior = replace(
-        ties,
-        density_prior_dex=settings.density_prior_sd_dex,
-        density_prior_factor=settings.density_prior_factor,
-    )
-    leaning = fit_stroke(
-        traces, start=fit.start, lightning_time_s=fit.lightning_time_s, model=model, ties=prior
-    )
-    if uncertainty_status(leaning, path, l_range=settings.l_range, leniency=LEANING) != "ok":
-        return _PathNumbers()
-    l_value, density = leaning.start[path]
-    return _PathNumbers(
-        l_value=l_value, density_m3=density, status="prior-dominated", leaning=leaning
-    )
-
-
 def _flags(
-    stroke: Stroke, item: PathTrace, sighting: Sighting, *, found: _PathNumbers, ties: Ties
+    stroke: Stroke, item: PathTrace, sighting: Sighting, *, found: PathNumbers, ties: Ties
 ) -> tuple[str, ...]:
     words = []
     if found.misfit:
         words.append("misfit")
     if ties.l_value is not None:
         words.append("l-given")
+    if ties.density_prior_dex is not None:
+        words.append("density-prior")
+    if found.curved:
+        words.append("curved-ridge")
     if sum(other.path == item.path for other in stroke.traces) > 1:
         words.append("echo")
     if sighting.thickness_s > DIFFUSE_S:

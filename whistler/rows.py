@@ -34,15 +34,21 @@ class WhistlerRow:
     l_value: float = NAN
     l_value_sd: float = NAN
     l_value_profile_sd: float = NAN
+    l_value_low: float = NAN
+    l_value_high: float = NAN
     equatorial_density_cm3: float = NAN
     equatorial_density_sd_cm3: float = NAN
     equatorial_density_profile_sd_cm3: float = NAN
+    equatorial_density_low_cm3: float = NAN
+    equatorial_density_high_cm3: float = NAN
     l_density_correlation: float = NAN
     dispersion_s_sqrt_hz: float = NAN
     nose_frequency_hz: float = NAN
     nose_time_s: float = NAN
     equatorial_gyrofrequency_hz: float = NAN
     tube_content_m2: float = NAN
+    tube_content_sd_m2: float = NAN
+    tube_content_profile_sd_m2: float = NAN
     frequency_low_hz: float = NAN
     frequency_high_hz: float = NAN
     snr_db: float = NAN
@@ -76,6 +82,8 @@ COLUMNS = (
     Column("l_value", None, "double", "L of the path"),
     Column("l_value_sd", None, "double", "one-sigma of L given the default model"),
     Column("l_value_profile_sd", None, "double", "one-sigma of L from profile, ionosphere, stroke"),
+    Column("l_value_low", None, "double", "95 % interval of L given the default model: lower end"),
+    Column("l_value_high", None, "double", "its upper end"),
     Column("equatorial_density_cm3", "cm-3", "double", "electron density at the equator"),
     Column("equatorial_density_sd_cm3", "cm-3", "double", "its one-sigma given the default model"),
     Column(
@@ -84,12 +92,26 @@ COLUMNS = (
         "double",
         "its one-sigma from profile, ionosphere, stroke",
     ),
+    Column(
+        "equatorial_density_low_cm3",
+        "cm-3",
+        "double",
+        "95 % interval of density given the default model: lower end",
+    ),
+    Column("equatorial_density_high_cm3", "cm-3", "double", "its upper end"),
     Column("l_density_correlation", None, "double", "correlation of L and ln density"),
     Column("dispersion_s_sqrt_hz", "s Hz0.5", "double", "zero-frequency dispersion of one hop"),
     Column("nose_frequency_hz", "Hz", "double", "nose frequency of the fitted model"),
     Column("nose_time_s", "s", "double", "nose delay after the lightning, one hop"),
     Column("equatorial_gyrofrequency_hz", "Hz", "double", "electron gyrofrequency at the equator"),
     Column("tube_content_m2", "m-2", "double", "electrons above 1000 km per area at 1000 km"),
+    Column("tube_content_sd_m2", "m-2", "double", "its one-sigma given the default model"),
+    Column(
+        "tube_content_profile_sd_m2",
+        "m-2",
+        "double",
+        "its one-sigma from profile, ionosphere, stroke",
+    ),
     Column("frequency_low_hz", "Hz", "double", "lowest traced frequency"),
     Column("frequency_high_hz", "Hz", "double", "highest traced frequency"),
     Column("snr_db", "dB", "double", "median power over noise along the trace"),

@@ -9,6 +9,7 @@ from whistler.errors import Notice, UsageError
 from whistler.station import Station
 
 DENSITY_PRIORS = ("saturated", "none")
+FIT_PRIORS = ("none", "climatology")
 
 
 @dataclass(frozen=True)
@@ -32,7 +33,7 @@ class Settings:
     density_exponent_sd : float
         One-sigma of alpha, counted in the profile sigma.
     fo_f2_sd_mhz, hm_f2_sd_km : float
-        One-sigma of the F2 layer's critical frequency and peak height.
+        One-sigma of the F2 layer's critical frequency and peak height, where the station has none.
     stroke_distance_sd_m : float
         One-sigma distance of the stroke from the foot of the path, m.
     density_prior : str
@@ -42,6 +43,11 @@ class Settings:
         What the climatology is multiplied with, for example for season and solar cycle.
     density_prior_sd_dex : float
         One-sigma of that prior, in decades of density.
+    fit_prior : str
+        What enters every fit beside the trace: ``"none"``, or ``"climatology"``, the density of the
+        full plasmasphere times `density_prior_factor`.
+    fit_prior_sd_dex : float
+        One-sigma of the density about it, in decades.
     l_range : tuple of float
         Lowest and highest L searched.
     options : tuple of (str, object)
@@ -72,6 +78,8 @@ class Settings:
     density_prior: str = "saturated"
     density_prior_factor: float = 1.0
     density_prior_sd_dex: float = 0.25
+    fit_prior: str = "none"
+    fit_prior_sd_dex: float = 0.3
     l_range: tuple[float, float] = (1.6, 5.5)
     options: tuple[tuple[str, Any], ...] = ()
 
@@ -87,8 +95,22 @@ class Settings:
             _refuse("l_range", self.l_range, "is not an increasing pair within 1.2 to 8")
         if self.density_prior not in DENSITY_PRIORS:
             _refuse("density_prior", self.density_prior, f"is not one of {DENSITY_PRIORS}")
+        if self.fit_prior not in FIT_PRIORS:
+            _refuse("fit_prior", self.fit_prior, f"is not one of {FIT_PRIORS}")
         if self.channel != "mean" and not (isinstance(self.channel, int) and self.channel >= 1):
             _refuse("channel", self.channel, "is neither a number from 1 nor 'mean'")
+
+    @property
+    def critical_frequency_sd_hz(self) -> float:
+        """One-sigma of the F2 layer's critical frequency, Hz: the station's, else the default."""
+        known = self.station.fo_f2_sd_mhz
+        return 1e6 * (self.fo_f2_sd_mhz if known is None else known)
+
+    @property
+    def peak_altitude_sd_m(self) -> float:
+        """One-sigma of the F2 layer's peak altitude, m: the station's, else the default."""
+        known = self.station.hm_f2_sd_km
+        return 1e3 * (self.hm_f2_sd_km if known is None else known)
 
     def to_dict(self) -> dict[str, Any]:
         """Return all settings as plain values, ready for JSON."""
@@ -113,6 +135,7 @@ _RANGES: dict[str, tuple[float, float]] = {
     "stroke_distance_sd_m": (0.0, 5e6),
     "density_prior_factor": (0.01, 100.0),
     "density_prior_sd_dex": (0.05, 5.0),
+    "fit_prior_sd_dex": (0.01, 5.0),
 }
 
 

@@ -53,6 +53,9 @@ class Station:
         Altitude of the F2 peak, km.
     scale_height_km : float
         Scale height of the F2 layer, km.
+    fo_f2_sd_mhz, hm_f2_sd_km : float or None
+        One-sigma of the layer's critical frequency and peak altitude, where they are known better
+        than the settings take for granted.
     channel_names : tuple of str
         Names of the recording's channels (antennas) in file order; empty when they have none.
 
@@ -73,6 +76,8 @@ class Station:
     fo_f2_mhz: float = 5.0
     hm_f2_km: float = 300.0
     scale_height_km: float = 60.0
+    fo_f2_sd_mhz: float | None = None
+    hm_f2_sd_km: float | None = None
     channel_names: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
@@ -144,7 +149,7 @@ class _Key:
             yield f"{self.path}={value:g} is outside {self.low:g} to {self.high:g}"
 
 
-_OPTIONAL = ("latitude_deg", "longitude_deg", "file_time_pattern")
+_OPTIONAL = ("latitude_deg", "longitude_deg", "file_time_pattern", "fo_f2_sd_mhz", "hm_f2_sd_km")
 _KEYS = (
     _Key("name", "name", "text"),
     _Key("latitude_deg", "latitude_deg", low=-90, high=90),
@@ -157,6 +162,8 @@ _KEYS = (
     _Key("ionosphere.fo_f2_mhz", "fo_f2_mhz", low=0.5, high=30),
     _Key("ionosphere.hm_f2_km", "hm_f2_km", low=150, high=700),
     _Key("ionosphere.scale_height_km", "scale_height_km", low=10, high=200),
+    _Key("ionosphere.fo_f2_sd_mhz", "fo_f2_sd_mhz", low=0, high=10),
+    _Key("ionosphere.hm_f2_sd_km", "hm_f2_sd_km", low=0, high=200),
     _Key("audio.channels", "channel_names", "texts"),
 )
 _PATHS = {key.path: key for key in _KEYS}
