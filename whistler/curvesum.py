@@ -14,6 +14,7 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
+KNEE = 3.0  # sigmas of a row; above, the remains of sferics are more likely than a whistler's share
 CHUNK = 512  # frames a thread works on at a time: the sums stay in the nearest cache
 
 
@@ -66,6 +67,31 @@ def slope_sums(
             high = min(stop, frames - whole)
             for t in range(low, high):
                 row[t] += source[t + whole]
+
+
+@_jit(parallel=True)
+def soften(rows: NDArray[np.float32], sigma: NDArray[np.float32], start: int, stop: int) -> None:
+    """Let what stands above `KNEE` sigmas count by its root, in place.
+
+    A sub-band cannot speak for a whole curve: the remains of a sferic fill one, a whistler many.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (r, frames), float32
+        Channel sums less their level.
+    sigma : ndarray, shape (r,), float32
+        Of each row's noise.
+    start, stop : int
+        Range of frame pairs.
+    """
+    for r in prange(rows.shape[0]):
+        row = rows[r]
+        scale = sigma[r]
+        knee = np.float32(KNEE * scale)
+        for t in range(start, stop):
+            over = row[t] - knee
+            if over > 0.0:
+                row[t] = knee + 2.0 * scale * (np.sqrt(1.0 + over / scale) - 1.0)
 
 
 @_jit()

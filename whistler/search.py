@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from whistler.bank import REFERENCE_HZ, Bank
 from whistler.chance import Null, chance_law
-from whistler.curvesum import slope_sums, template_maxima
+from whistler.curvesum import slope_sums, soften, template_maxima
 from whistler.rowplan import plan_rows, range_scale, row_noise
 from whistler.spectrogram import Spectrogram
 
@@ -19,6 +19,7 @@ RANGE_ENDS_HZ = (3600.0, 6200.0)
 LARGEST_SHARE = 0.5  # of the power that one sub-band may hold
 SUM_REACH_S = 1.2  # around a peeled ridge: curves that pass farther off share little with it
 ROW_REACH_S = 0.5
+UNKNOWN_SIGMA = 1e30  # before the noise is known, nothing stands out
 NULL_STRIDE = 3  # every third template serves for the reversed recording
 
 
@@ -82,11 +83,14 @@ class CurveSearch:
         self._best = np.full(frames, -1e9, np.float32)
         self._which = np.zeros(frames, np.int32)
         self._level = np.zeros((len(self._rows), 1), np.float32)
+        self._sigma = np.full(len(self._rows), UNKNOWN_SIGMA, np.float32)
         self._stale_rows: list[tuple[int, int]] = []
         self._stale_sums: list[tuple[int, int]] = []
         self._sum(0, frames)
         self._level, variance = row_noise(self._rows[:, self._heard])
+        self._sigma = np.sqrt(variance).astype(np.float32)
         self._rows -= self._level
+        soften(self._rows, self._sigma, 0, frames)
         self._scale = range_scale(variance, self._plan, starts=self._starts, ends=self._ends)
         self._maximise(0, frames)
 
@@ -141,6 +145,7 @@ class CurveSearch:
             stop,
         )
         self._rows[:, start:stop] -= self._level
+        soften(self._rows, self._sigma, start, stop)
 
     def _maximise(self, start: int, stop: int) -> None:
         plan = self._plan
@@ -166,6 +171,7 @@ class CurveSearch:
         mirrored = np.ascontiguousarray(self._excess[::-1, :, ::-1])
         slope_sums(mirrored, plan.first_channel, plan.channel_count, plan.shift, rows, 0, frames)
         rows -= self._level
+        soften(rows, self._sigma, 0, frames)
         best = np.full(frames, -1e9, np.float32)
         template_maxima(
             rows,

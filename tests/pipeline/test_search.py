@@ -13,7 +13,7 @@ from fieldlines import FieldLineModel, maximum_frequency, saturated_density, tra
 from whistler.bank import DUCT_LIMIT, Bank
 from whistler.chance import NULL_WINDOW_S, Null, chance_law
 from whistler.cleaning import CleanAudio
-from whistler.curvesum import slope_sums, template_maxima
+from whistler.curvesum import slope_sums, soften, template_maxima
 from whistler.discovery import THICK, THIN, Banks, Pass, find_traces
 from whistler.search import CurveSearch
 from whistler.settings import Settings
@@ -184,23 +184,34 @@ def test_many_hops_look_like_one_of_more_density(
     assert abs(best[1] - 1.0) < 0.03  # not at the edge of what was tried
 
 
+def test_one_loud_sub_band_counts_by_its_root() -> None:
+    """Identity: below the knee nothing changes; above, 3 + 2 (sqrt(1 + over) - 1) sigmas, by hand.
+
+    An excess of 8 sigmas over the knee counts 2 (3 - 1) = 4; one of 24 counts 8.
+    """
+    rows = np.array([[-5.0, 2.0, 3.0, 11.0, 27.0], [-10.0, 4.0, 6.0, 22.0, 54.0]], np.float32)
+    soften(rows, np.array([1.0, 2.0], np.float32), 0, 4)
+    assert rows[0] == pytest.approx([-5.0, 2.0, 3.0, 7.0, 27.0])  # the last is out of range
+    assert rows[1] == pytest.approx([-10.0, 4.0, 6.0, 14.0, 54.0])
+
+
 # The law of chance
 
 
 def test_threshold_and_rate_are_inverses() -> None:
     """Identity: the rate at the threshold of a rate is that rate, above the strongest seen."""
-    null = Null(location=6.0, scale=0.7, window_s=0.25, strongest=0.0, duration_s=60.0)
+    null = Null(location=36.0, scale=7.0, window_s=0.25, strongest=0.0, duration_s=60.0)
     for rate in np.geomspace(0.01, 3000.0, 12):
         assert null.rate_per_hour(null.threshold(rate)) == pytest.approx(rate, rel=1e-9)
-    wanted = 14_400 * stats.gumbel_r.sf(8.5, 6.0, 0.7)  # scipy.stats.gumbel_r: outside law
+    wanted = 14_400 * stats.gumbel_r.sf(8.5**2, 36.0, 7.0)  # scipy.stats.gumbel_r: outside law
     assert null.rate_per_hour(8.5) == pytest.approx(wanted, rel=1e-9)
-    floor = Null(location=6.0, scale=0.7, window_s=0.25, strongest=20.0, duration_s=60.0)
+    floor = Null(location=36.0, scale=7.0, window_s=0.25, strongest=20.0, duration_s=60.0)
     assert floor.threshold(1.0) == 20.0
     assert floor.rate_per_hour(19.0) == 60.0
 
 
 def test_law_is_read_off_its_own_samples() -> None:
-    """Recovery: Gumbel maxima (scipy.stats.gumbel_r) give location and scale back, to 3 sigma.
+    """Recovery: sums with Gumbel squares (scipy.stats.gumbel_r) give their law back, to 3 sigma.
 
     A window holds 30 values, whose maximum is Gumbel again with a location scale ln 30 higher. Of
     4000 windows the median is good to 0.02 scales, the distance to the 95 % point to 3.5 %. Ten
@@ -208,11 +219,12 @@ def test_law_is_read_off_its_own_samples() -> None:
     """
     generator = np.random.default_rng(4)
     frame_s = NULL_WINDOW_S / 30
-    best = stats.gumbel_r.rvs(3.0, 0.6, size=120_000, random_state=generator).astype(np.float32)
+    squares = stats.gumbel_r.rvs(30.0, 6.0, size=120_000, random_state=generator)
+    best = np.sqrt(np.maximum(squares, 0.0)).astype(np.float32)
     best[generator.integers(0, best.size, 10)] = 40.0
     law = chance_law(best, frame_s=frame_s)
-    assert law.location == pytest.approx(3.0 + 0.6 * np.log(30), abs=0.08)
-    assert law.scale == pytest.approx(0.6, rel=0.12)
+    assert law.location == pytest.approx(30.0 + 6.0 * np.log(30), abs=0.8)
+    assert law.scale == pytest.approx(6.0, rel=0.12)
     assert law.strongest == 40.0
     assert law.duration_s == pytest.approx(1000.0)
 
