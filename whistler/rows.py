@@ -28,9 +28,11 @@ class WhistlerRow:
     sferic_time_s: float = NAN
     sferic_time_sd_s: float = NAN
     sferic_seen: bool = False
+    sferic_probability: float = NAN
     lightning_time_s: float = NAN
     time: str | None = None
     hops: int = 1
+    hop_probability: float = NAN
     l_value: float = NAN
     l_value_sd: float = NAN
     l_value_profile_sd: float = NAN
@@ -54,6 +56,7 @@ class WhistlerRow:
     snr_db: float = NAN
     significance: float = NAN
     fit_rms_s: float = NAN
+    centre_share_sd: float = NAN
     uncertainty_status: str = "undetermined"
     flags: tuple[str, ...] = ()
     trace: Trace = NO_TRACE
@@ -76,9 +79,11 @@ COLUMNS = (
     ),
     Column("sferic_time_sd_s", "s", "double", "one-sigma of the sferic time"),
     Column("sferic_seen", None, "boolean", "whether an actual sferic was identified there"),
+    Column("sferic_probability", None, "double", "probability of the likeliest sferic seen"),
     Column("lightning_time_s", "s", "double", "lightning: sferic time less its waveguide path"),
     Column("time", "UTC", "isotime", "sferic time on the clock"),
     Column("hops", None, "integer", "field-line crossings"),
+    Column("hop_probability", None, "double", "probability of that number of crossings"),
     Column("l_value", None, "double", "L of the path"),
     Column("l_value_sd", None, "double", "one-sigma of L given the default model"),
     Column("l_value_profile_sd", None, "double", "one-sigma of L from profile, ionosphere, stroke"),
@@ -117,6 +122,12 @@ COLUMNS = (
     Column("snr_db", "dB", "double", "median power over noise along the trace"),
     Column("significance", "h-1", "double", "false alarms expected in an hour this strong"),
     Column("fit_rms_s", "s", "double", "rms of trace minus model"),
+    Column(
+        "centre_share_sd",
+        None,
+        "double",
+        "one-sigma of the trace within its thickness, as a share of travel time",
+    ),
     Column("uncertainty_status", None, "string", "ok, or why a sigma is missing"),
     Column("flags", None, "string", "short words, separated by spaces"),
 )
