@@ -15,8 +15,8 @@ NULL_QUANTILES = (0.5, 0.95)
 class Null:
     """Law of the strongest chance sum in a short window, from the reversed recording.
 
-    Sums of many cells are close to Gaussian, so the square of the strongest of many follows a Gumbel
-    law; taking the law of the strongest itself would overstate what is rare.
+    Sums of many cells are close to Gaussian, so the square of the strongest of many follows a
+    Gumbel law; taking the law of the strongest itself would overstate what is rare.
 
     Parameters
     ----------
