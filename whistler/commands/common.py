@@ -61,6 +61,22 @@ DensityFactorOption = Annotated[
     float,
     typer.Option("--density-factor", metavar="X", help="Multiply the prior's densities by this."),
 ]
+FitPriorOption = Annotated[
+    str,
+    typer.Option(
+        "--fit-prior", metavar="NAME", help="What enters every fit: none, or climatology (density)."
+    ),
+]
+FitPriorSdOption = Annotated[
+    float, typer.Option("--fit-prior-sd", metavar="DEX", help="Its one-sigma, decades of density.")
+]
+AlphaOption = Annotated[
+    float, typer.Option("--alpha", metavar="A", help="Density along the line goes as r^-A.")
+]
+AlphaSdOption = Annotated[
+    float,
+    typer.Option("--alpha-sd", metavar="SD", help="One-sigma of --alpha, for the (±) errors."),
+]
 OverwriteOption = Annotated[
     bool, typer.Option("--overwrite", help="Replace a catalogue of something else.")
 ]

@@ -42,6 +42,11 @@ def fit(
         str | None, typer.Option("--date", metavar="ISO8601", help="UTC of time zero of the picks.")
     ] = None,
     station: common.StationOption = None,
+    density_factor: common.DensityFactorOption = 1.0,
+    fit_prior: common.FitPriorOption = "none",
+    fit_prior_sd: common.FitPriorSdOption = 0.3,
+    alpha: common.AlphaOption = 1.0,
+    alpha_sd: common.AlphaSdOption = 0.65,
     out: Annotated[
         Path | None, typer.Option("--out", metavar="DIR", help="Folder for the catalogue.")
     ] = None,
@@ -74,7 +79,14 @@ def fit(
         "lightning_time_s": lightning_time,
         "l_value": l_value,
     }
-    settings = _settings(station, date=date, **ties)
+    declared = {
+        "density_prior_factor": density_factor,
+        "fit_prior": fit_prior,
+        "fit_prior_sd_dex": fit_prior_sd,
+        "density_exponent": alpha,
+        "density_exponent_sd": alpha_sd,
+    }
+    settings = _settings(station, declared, date=date, **ties)
     zero = parse_time(date) if date else None
     traces = read_picks(picks)
     if out is not None:
@@ -86,10 +98,10 @@ def fit(
     if json:
         print(json_text(document([item], settings), indent=1))
     else:
-        _show(rows, out)
+        _show(rows, out, settings)
 
 
-def _settings(station: Path | None, **told: Any) -> Settings:
+def _settings(station: Path | None, declared: dict[str, Any], **told: Any) -> Settings:
     """Return settings that remember what the fit was told, after checking it."""
     common.require_hops(told["hops"])
     common.require_finite(
@@ -97,13 +109,13 @@ def _settings(station: Path | None, **told: Any) -> Settings:
         sferic_time_sd=told["sferic_time_sd_s"],
         lightning_time=told["lightning_time_s"],
     )
-    return common.build_settings(station=station, options=tuple(told.items()))
+    return common.build_settings(station=station, options=tuple(told.items()), **declared)
 
 
-def _show(rows: list[WhistlerRow], out: Path | None) -> None:
+def _show(rows: list[WhistlerRow], out: Path | None, settings: Settings) -> None:
     from whistler.commands.table import legend, rows_table
 
     print(rows_table(rows))
-    print(f"\n{legend()}")
+    print(f"\n{legend(settings)}")
     if out is not None:
         print(f"\nsaved in {printable(str(out))}: catalogue.csv")

@@ -31,6 +31,10 @@ def measure(
     max_hops: common.MaxHopsOption = 5,
     density_prior: common.DensityPriorOption = "saturated",
     density_factor: common.DensityFactorOption = 1.0,
+    fit_prior: common.FitPriorOption = "none",
+    fit_prior_sd: common.FitPriorSdOption = 0.3,
+    alpha: common.AlphaOption = 1.0,
+    alpha_sd: common.AlphaSdOption = 0.65,
     figures: Annotated[bool, typer.Option(help="One figure a recording, with --out.")] = True,
     overwrite: common.OverwriteOption = False,
     quiet: common.QuietOption = False,
@@ -52,6 +56,10 @@ def measure(
         max_hops=max_hops,
         density_prior=density_prior,
         density_prior_factor=density_factor,
+        fit_prior=fit_prior,
+        fit_prior_sd_dex=fit_prior_sd,
+        density_exponent=alpha,
+        density_exponent_sd=alpha_sd,
         options=(("start", start),) if start else (),
     )
     began = parse_time(start) if start else None
@@ -104,7 +112,7 @@ class _Run:
                     self._out, self.entries, settings=self._settings, refused=self.refused
                 )
         if any(item.whistlers for item in self.entries):
-            self._print(legend())
+            self._print(legend(self._settings))
         if self._out is not None:
             self._print(f"\nsaved in {printable(str(self._out))}: {self._saved()}")
 

@@ -21,6 +21,10 @@ def night(
     max_hops: common.MaxHopsOption = 5,
     density_prior: common.DensityPriorOption = "saturated",
     density_factor: common.DensityFactorOption = 1.0,
+    fit_prior: common.FitPriorOption = "none",
+    fit_prior_sd: common.FitPriorSdOption = 0.3,
+    alpha: common.AlphaOption = 1.0,
+    alpha_sd: common.AlphaSdOption = 0.65,
     overwrite: common.OverwriteOption = False,
     quiet: common.QuietOption = False,
     verbose: common.VerboseOption = False,
@@ -40,6 +44,10 @@ def night(
         max_hops=max_hops,
         density_prior=density_prior,
         density_prior_factor=density_factor,
+        fit_prior=fit_prior,
+        fit_prior_sd_dex=fit_prior_sd,
+        density_exponent=alpha,
+        density_exponent_sd=alpha_sd,
     )
     if not folder.is_dir():
         raise UsageError(Notice("E605", str(folder), "not a folder", "name a folder of recordings"))

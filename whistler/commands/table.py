@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import NamedTuple
 
 from whistler.clock import iso_time
 from whistler.errors import printable
 from whistler.recording import Recording
 from whistler.rows import WhistlerRow
+from whistler.settings import Settings
 
 STATUS_WORDS = {"undetermined": "undet", "at-bound": "bound", "prior-dominated": "prior"}
 LEGEND = (
@@ -85,6 +86,35 @@ def rows_table(rows: Sequence[WhistlerRow]) -> str:
     return "\n".join([head, *body])
 
 
-def legend() -> str:
-    """Return the lines that explain the columns."""
-    return "\n".join(LEGEND)
+def legend(settings: Settings | None = None) -> str:
+    """Return the lines that explain the columns, and those that tell what was declared.
+
+    Parameters
+    ----------
+    settings : Settings, optional
+        What the rows were made with: a prior that entered the fits, another profile or ionosphere.
+    """
+    return "\n".join([*LEGEND, *(_declared(settings) if settings else ())])
+
+
+def _declared(settings: Settings) -> Iterator[str]:
+    """Yield a line for every prior or model that is not the default."""
+    if settings.fit_prior != "none":
+        factor = settings.density_prior_factor
+        times = "" if factor == 1.0 else f"{factor:g} times "
+        yield (
+            f"prior   {times}the density climatology ± {settings.fit_prior_sd_dex:g} decades "
+            "entered every fit"
+        )
+    plain = Settings()
+    alpha = (settings.density_exponent, settings.density_exponent_sd)
+    if alpha != (plain.density_exponent, plain.density_exponent_sd):
+        yield f"alpha   {alpha[0]:g} ± {alpha[1]:g} declared (density along the line: r^-alpha)"
+    station = settings.station
+    if (station.fo_f2_sd_mhz, station.hm_f2_sd_km) != (None, None):
+        fo_f2_sd_mhz = settings.critical_frequency_sd_hz / 1e6
+        hm_f2_sd_km = settings.peak_altitude_sd_m / 1e3
+        yield (
+            f"F2      foF2 {station.fo_f2_mhz:g} ± {fo_f2_sd_mhz:g} MHz, "
+            f"hmF2 {station.hm_f2_km:g} ± {hm_f2_sd_km:g} km declared"
+        )

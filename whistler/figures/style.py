@@ -76,11 +76,12 @@ def row_label(row: WhistlerRow) -> str:
         return f"{hops}: L and n {status}"
     if row.uncertainty_status != "ok":
         return f"{hops}: L {row.l_value:.2f}, n {row.equatorial_density_cm3:.0f} cm⁻³, {status}"
+    prior = ", density prior" if "density-prior" in row.flags else ""
     path = _with_sd(row.l_value, row.l_value_sd, least_decimals=3)
     density = _with_sd(row.equatorial_density_cm3, row.equatorial_density_sd_cm3)
     return (
         f"{hops}: L {path} (± {row.l_value_profile_sd:.2f}), "
-        f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³"
+        f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³{prior}"
     )
 
 
