@@ -22,13 +22,17 @@ sys.path.insert(0, str(Path(__file__).parent))
 sys.path.insert(0, str(Path(__file__).parents[1] / "pipeline"))
 
 from limits_decoys import decoys
+from limits_errors import astray, sigmas
 from limits_run import Options, Part
-from limits_strength import strength
+from limits_strength import diffuse, strength
 from promises import plain
 
 PARTS: dict[str, Callable[[Options], Part]] = {
     "strength": strength,
+    "diffuse": diffuse,
     "decoys": decoys,
+    "sigmas": sigmas,
+    "astray": astray,
 }
 
 
@@ -75,6 +79,7 @@ def document(parts: dict[str, Part]) -> str:
             name: {
                 "title": part.title,
                 "figures": [plain(figure) for figure in part.figures],
+                "tables": [grid.plain() for grid in part.grids],
                 "notes": part.notes,
                 "oddities": part.oddities,
             }

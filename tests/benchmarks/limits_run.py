@@ -15,7 +15,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TypeVar
 
-from promises import Figure, table
+from promises import Figure, Grid, table
 from scoring import Scored, measure_scene
 
 from whistler.settings import Settings
@@ -42,16 +42,17 @@ class Options:
 
 @dataclass(frozen=True)
 class Part:
-    """What one part of the campaign measured: figures, remarks on method, odd cases."""
+    """What one part of the campaign measured: figures, tables, remarks on method, odd cases."""
 
     title: str
     figures: tuple[Figure, ...]
+    grids: tuple[Grid, ...] = ()
     notes: tuple[str, ...] = ()
     oddities: tuple[str, ...] = ()
 
     def __str__(self) -> str:
         """Return Markdown."""
-        lines = [table(self.title, self.figures)]
+        lines = [table(self.title, self.figures), *map(str, self.grids)]
         lines += [f"{note}\n" for note in self.notes]
         if self.oddities:
             lines += ["Oddities:\n", *[f"- {line}" for line in self.oddities], ""]

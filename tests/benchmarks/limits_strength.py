@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from limits_level import level_figures
 from limits_run import Job, Options, Part, jobs_until, measure_all
@@ -21,11 +23,32 @@ THIN = Campaign(
     hop_shares=(0.9, 0.1, 0.0, 0.0, 0.0),
     pause_range_s=(1.0, 3.0),
 )
+# Seeds after the campaign's first, band and thickness of diffuse traces.
+DIFFUSE_AFTER = 1000
+DIFFUSE = Campaign(
+    l_range=(2.0, 4.0),
+    snr_range_db=(0.0, 12.0),
+    low_range_hz=(700.0, 700.0),
+    high_hz=6000.0,
+    spread_range_s=(0.025, 0.025),
+    path_shares=(1.0, 0.0, 0.0),
+    hop_shares=(1.0, 0.0, 0.0, 0.0, 0.0),
+    pause_range_s=(1.0, 3.0),
+)
+SFERICS_HZ = (5.0, 80.0)
+PROMISED_DB = 6.0
 L_EDGES = (2.0, 2.8, 3.6, 4.5)
 SURE_DB = 5.0  # from here nothing may be missed
 THIN_NOTE = (
     "Strength: `whistler/synthesis/level.py`. The noise is the background's with its sferics and "
     "hum, by the median, and so a little above the quiet noise."
+)
+
+DIFFUSE_NOTE = (
+    "Strength of a diffuse trace: the median over channels of the power in the one cell centred on "
+    "the mean arrival, as for thin ones. Its sub-paths speckle it and spread it over many cells: "
+    "the mean over channels lies 3.4 dB above that median (2.4 dB for thin traces), and all cells "
+    "of a channel together hold 10 dB more than that median (thin: 1.5 dB)."
 )
 
 
@@ -55,6 +78,58 @@ def strength(options: Options) -> Part:
         notes=(THIN_NOTE,),
         oddities=tuple(odd_ones(summary, from_db=2.0)),
     )
+
+
+def diffuse_scene(seed: int) -> Scene:
+    """A minute of thick one-hop whistlers below 6 kHz under sparse to dense sferics."""
+    rate_hz = np.exp(np.random.default_rng([seed, 2]).uniform(*np.log(SFERICS_HZ)))
+    return campaign_scene(seed, campaign=replace(DIFFUSE, sferic_rate_hz=round(float(rate_hz), 1)))
+
+
+def diffuse(options: Options) -> Part:
+    """Share found of diffuse traces against strength."""
+    begin = options.first_seed + DIFFUSE_AFTER
+    least = options.amount(240, quick=50)
+    jobs = jobs_until(diffuse_scene, range(begin, begin + 1000), least=least)
+    summary = measured(jobs, options, name="diffuse")
+    figures = [
+        Figure("injections", len(summary.pairs), unit=""),
+        share_at(summary.pairs, PROMISED_DB, low=90.0),
+        *curve_figures(summary.pairs, ((0.5, np.inf), (0.9, np.inf))),
+        *binned_figures(summary.pairs, (0, 2, 4, 6, 8, 10, 12)),
+        *rate_figures(jobs, summary.pairs),
+        hourly_figure("rows without a true trace", len(summary.extra), summary.minutes),
+    ]
+    return Part(
+        "Strength, diffuse traces (25 ms spread, 0.7-6 kHz, 5-80 sferics/s)",
+        tuple(figures),
+        notes=(DIFFUSE_NOTE,),
+        oddities=tuple(odd_ones(summary, from_db=PROMISED_DB)),
+    )
+
+
+def share_at(pairs: tuple[Pair, ...], strength_db: float, *, low: float) -> Figure:
+    """Share found at one strength, by a logistic curve."""
+    snr_db, found, seed = strengths(pairs)
+
+    def share(index: np.ndarray) -> list[float]:
+        return [100.0 * logistic(snr_db[index], found[index]).share(strength_db)]
+
+    value = share(np.arange(snr_db.size))[0]
+    interval = resampled(seed, share)[0]
+    return Figure(f"found at {strength_db:+g} dB, by the curve", value, low, interval=interval)
+
+
+def rate_figures(jobs: list[Job], pairs: tuple[Pair, ...]) -> list[Figure]:
+    """Share found at +4 dB and above, under sparse and under dense sferics."""
+    rates_hz = {job.seed: job.scene.sferics[0].rate_hz for job in jobs}
+    strong = [pair for pair in pairs if pair.truth.snr_db >= 4.0]
+    rate_hz = np.array([rates_hz[pair.seed] for pair in strong])
+    found = np.array([pair.row is not None for pair in strong])
+    return [
+        share_figure(f"found at +4 dB and above under {low:g} to {high:g} sferics/s", found[inside])
+        for low, high, inside in bins((SFERICS_HZ[0], 20.0, SFERICS_HZ[1]), rate_hz)
+    ]
 
 
 def measured(jobs: list[Job], options: Options, *, name: str) -> Summary:

@@ -67,3 +67,33 @@ def table(title: str, figures: Sequence[Figure]) -> str:
         mark = "" if figure.target == "-" else "kept" if figure.kept else "**missed**"
         lines.append(f"| {figure.name} | {figure.measured} | {figure.target.strip()} | {mark} |")
     return "\n".join([*lines, ""])
+
+
+@dataclass(frozen=True)
+class Grid:
+    """A table of numbers that promise nothing by themselves."""
+
+    title: str
+    head: tuple[str, ...]
+    rows: tuple[tuple[str | float, ...], ...]
+
+    def __str__(self) -> str:
+        """Return Markdown; numbers to three digits, a dash for none."""
+        lines = [f"#### {self.title}", "", _line(self.head), _line(["---"] * len(self.head))]
+        return "\n".join([*lines, *map(_line, self.rows), ""])
+
+    def plain(self) -> dict[str, object]:
+        """Return the table for strict JSON: what is not finite is null."""
+        rows = [
+            [None if isinstance(v, float) and not math.isfinite(v) else v for v in row]
+            for row in self.rows
+        ]
+        return {"title": self.title, "head": self.head, "rows": rows}
+
+
+def _line(cells: Sequence[str | float]) -> str:
+    shown = [
+        cell if isinstance(cell, str) else "-" if math.isnan(cell) else f"{cell:.3g}"
+        for cell in cells
+    ]
+    return f"| {' | '.join(shown)} |"
