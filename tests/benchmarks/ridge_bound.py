@@ -94,6 +94,7 @@ def ridge(
     density_m3: float,
     band_hz: tuple[float, float],
     model: FieldLineModel,
+    hops: int = 1,
     quasi_longitudinal: bool = False,
 ) -> Ridge:
     """Cut the trace of a path into its matched cells; `band_hz` lies below the gyrofrequency."""
@@ -105,6 +106,7 @@ def ridge(
             frequency_hz, l_value=l_value, equatorial_density_m3=density_m3, model=model
         )
         time_s, jacobian = delay.time_s, delay.jacobian[:, :2]
+    time_s, jacobian = hops * time_s, hops * jacobian
     slope = np.gradient(time_s, frequency_hz, edge_order=2)
     bend = np.gradient(slope, frequency_hz, edge_order=2)
     by_slope = np.abs(slope) ** -0.5
