@@ -23,7 +23,9 @@ sys.path.insert(0, str(Path(__file__).parents[1] / "pipeline"))
 
 from limits_decoys import decoys
 from limits_errors import astray, sigmas
+from limits_groups import groups, sferics
 from limits_run import Options, Part
+from limits_separable import separable
 from limits_strength import diffuse, strength
 from promises import plain
 
@@ -33,6 +35,9 @@ PARTS: dict[str, Callable[[Options], Part]] = {
     "decoys": decoys,
     "sigmas": sigmas,
     "astray": astray,
+    "groups": groups,
+    "sferics": sferics,
+    "separable": separable,
 }
 
 

@@ -129,6 +129,7 @@ def sigmas(options: Options) -> Part:
     ]
     for name in ("L", "density"):
         figures += ratio_figures(found, name)
+    figures += interval_figures(summary)
     figures += coverage_figures(summary.pairs, profile=False, one=(63, 73), two=(92, 97))
     for title, seen in (("sferic named", True), ("no sferic named", False)):
         some = tuple(p for p in summary.pairs if p.row is not None and p.row.sferic_seen == seen)
@@ -227,6 +228,27 @@ def coverage_figures(
                 *limits,
                 interval=ends,
             )
+
+
+def interval_figures(summary: Summary) -> Iterator[Figure]:
+    """Share of true values within the stated 95 % intervals, where they are stated."""
+    found = [(t, r) for t, r in summary.found if r.uncertainty_status == "ok"]
+    for name, ends in (
+        ("L", [(r.l_value_low, t.l_value, r.l_value_high) for t, r in found]),
+        (
+            "density",
+            [
+                (
+                    r.equatorial_density_low_cm3,
+                    t.equatorial_density_cm3,
+                    r.equatorial_density_high_cm3,
+                )
+                for t, r in found
+            ],
+        ),
+    ):
+        hits = [low <= true <= high for low, true, high in ends if math.isfinite(low + high)]
+        yield share_figure(f"{name} within its stated 95 % interval", hits, low=92, high=97)
 
 
 def share_within(pull: np.ndarray, width: float) -> Callable[[np.ndarray], list[float]]:

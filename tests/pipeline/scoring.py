@@ -23,7 +23,7 @@ import numpy as np
 from promises import Figure
 from scipy.optimize import linear_sum_assignment
 
-from whistler.measure import measure_recording
+from whistler.measure import Measurement, measure_recording
 from whistler.recording import open_recording
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings
@@ -31,7 +31,7 @@ from whistler.synthesis.draw import Campaign, draw_decoy_scene, draw_scene
 from whistler.synthesis.files import flac_bytes
 from whistler.synthesis.render import render
 from whistler.synthesis.scene import Scene
-from whistler.synthesis.truth import WhistlerTruth
+from whistler.synthesis.truth import Truth, WhistlerTruth
 
 MATCH_S = 0.030
 LEAST_POINTS = 4
@@ -71,15 +71,15 @@ def distance_s(row: WhistlerRow, truth: WhistlerTruth) -> float:
 
 
 def match(
-    truths: Sequence[WhistlerTruth], rows: Sequence[WhistlerRow]
+    truths: Sequence[WhistlerTruth], rows: Sequence[WhistlerRow], *, within_s: float = MATCH_S
 ) -> list[tuple[int, int, float]]:
     """One-to-one pairs (truth, row, distance): most pairs first, then the closest."""
     if not truths or not rows:
         return []
     table = np.array([[distance_s(row, truth) for row in rows] for truth in truths])
-    allowed = table <= MATCH_S
+    allowed = table <= within_s
     # A forbidden pair costs more than all allowed ones together could save.
-    cost = np.where(allowed, table, 1.0 + MATCH_S * min(table.shape))
+    cost = np.where(allowed, table, 1.0 + within_s * min(table.shape))
     pairs = zip(*linear_sum_assignment(cost), strict=True)
     return [(int(i), int(j), float(table[i, j])) for i, j in pairs if allowed[i, j]]
 
@@ -97,16 +97,24 @@ def score(truths: Iterable[WhistlerTruth], rows: Sequence[WhistlerRow], *, seed:
     return Scored(seed, math.nan, tuple(pairs), extra)
 
 
-def measure_scene(
-    scene: Scene, *, seed: int, folder: Path, settings: Settings | None = None
-) -> Scored:
-    """Render a scene to FLAC, open it, measure it, score it."""
+def heard(
+    scene: Scene, *, folder: Path, settings: Settings | None = None
+) -> tuple[Truth, Measurement]:
+    """Render a scene to FLAC, open it, measure it: its truth, and what was measured."""
     recording = render(scene)
     path = folder / f"{scene.name}.flac"
     path.write_bytes(flac_bytes(recording))
     measurement = measure_recording(open_recording(path), settings or Settings())
     path.unlink()
-    scored = score(recording.truth.whistlers, measurement.rows, seed=seed)
+    return recording.truth, measurement
+
+
+def measure_scene(
+    scene: Scene, *, seed: int, folder: Path, settings: Settings | None = None
+) -> Scored:
+    """Render, measure and score a scene."""
+    truth, measurement = heard(scene, folder=folder, settings=settings)
+    scored = score(truth.whistlers, measurement.rows, seed=seed)
     return Scored(seed, scene.duration_s, scored.pairs, scored.extra)
 
 
