@@ -1,39 +1,40 @@
-"""Fit hand-picked points: the same problem as a measured stroke, with what the user knows."""
+"""Fit points that a person picked, or edited: rows of results made again with other points."""
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from datetime import datetime, timedelta
 
 import numpy as np
 
-from fieldlines import saturated_density, travel_time
-from whistler.clock import decimal_year, iso_time
+from fieldlines.errors import FloatArray
+from whistler.clock import decimal_year, parse_time
+from whistler.edit import Edit, apply_edits, same_points
 from whistler.errors import Notice, UsageError
-from whistler.fit import fit_stroke
-from whistler.group import Stroke
-from whistler.model import field_line_model, receiver_latitude
-from whistler.problem import L_LIMITS, PathTrace, SfericTime, Ties
-from whistler.results import Sighting, stroke_rows
+from whistler.fit import model_curve
+from whistler.handfit import HandStroke, Start, check_points, fit_by_hand, hop_orders
+from whistler.model import field_line_model
+from whistler.problem import L_LIMITS, PathTrace
+from whistler.results import DIFFUSE_S, Sighting
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings
 from whistler.trace import Trace
 
-LIGHTNING_SD_S = (
-    1e-4  # of a lightning time given by the user: a location network's (common practice)
-)
-LEAST_POINTS = 3
+SFERIC_SD_S = 0.002  # of a sferic read off by hand
+EDITED, BESIDE_EDITED = "edited", "group-edited"
 
 
 def fit_picks(
-    traces: dict[str, Trace],
+    traces: Mapping[str, Trace],
+    edits: Sequence[Edit] = (),
     *,
     settings: Settings,
     recording: str = "picks",
-    hops: int = 1,
+    hops: int | Sequence[int] = 1,
     start_time: datetime | None = None,
     sferic_time_s: float | None = None,
-    sferic_time_sd_s: float = 0.002,
+    sferic_time_sd_s: float = SFERIC_SD_S,
     lightning_time_s: float | None = None,
     l_value: float | None = None,
 ) -> list[WhistlerRow]:
@@ -41,14 +42,16 @@ def fit_picks(
 
     Parameters
     ----------
-    traces : dict of str to Trace
+    traces : mapping of str to Trace
         Points by name, times from one common zero.
+    edits : sequence of Edit
+        Made to the traces first, in this order.
     settings : Settings
         Model and declared one-sigmas.
     recording : str
         What to call the source.
-    hops : int
-        Field-line crossings of every trace.
+    hops : int or sequence of int
+        Field-line crossings of every trace, or of each.
     start_time : datetime, optional
         Time zero of the picks, UTC.
     sferic_time_s, sferic_time_sd_s : float
@@ -61,91 +64,205 @@ def fit_picks(
     Returns
     -------
     list of WhistlerRow
-        One for each trace.
+        One for each trace, with the flag ``edited`` where its points are not those handed in.
 
     Raises
     ------
     UsageError
-        When a trace has fewer than three points.
+        When an edit cannot be made, or a trace has fewer than three points.
     """
-    _check(traces)
-    if not sferic_time_sd_s > 0.0:
-        reason = f"{sferic_time_sd_s} s is not above 0"
-        raise UsageError(Notice("E601", "sferic_time_sd_s", reason, "give its one-sigma in s"))
-    model = field_line_model(settings, decimal_year=decimal_year(start_time))
-    settings = replace(settings, l_range=L_LIMITS)  # picks need not lie where the search looks
-    latitude_rad = receiver_latitude(settings, decimal_year=decimal_year(start_time))
-    sferic = None
-    if sferic_time_s is not None:
-        sferic = SfericTime(sferic_time_s, sferic_time_sd_s, hops % 2 == 1, latitude_rad)
-    tie = None if lightning_time_s is None else (lightning_time_s, LIGHTNING_SD_S)
-    ties = Ties(sferic, tie, l_value)
-    items = [PathTrace(trace, hops, number) for number, trace in enumerate(traces.values())]
-    starts = [_start(item, ties, settings, decimal_year(start_time)) for item in items]
-    fit = fit_stroke(
-        items,
-        start=[(start_l, density) for start_l, density, _ in starts],
-        lightning_time_s=float(np.median([time_s for _, _, time_s in starts])),
-        model=model,
-        ties=ties,
-    )
-    stroke = Stroke(
-        members=tuple(range(len(items))),
-        hops=(hops,) * len(items),
-        traces=tuple(items),
-        fit=fit,
-        sferic=sferic,
-        sferic_probability=1.0 if sferic else 0.0,
-    )
-    rows = stroke_rows(
-        stroke,
-        [Sighting()] * len(items),
-        group=1,
+    edited = apply_edits(traces, edits)
+    check_points(edited)
+    orders = hop_orders(hops, len(edited))
+    items = [
+        PathTrace(trace, order, path)
+        for path, (trace, order) in enumerate(zip(edited.values(), orders, strict=True))
+    ]
+    task = HandStroke(
+        items=tuple(items),
+        sferic_s=_sferic(sferic_time_s, sferic_time_sd_s),
+        lightning_time_s=lightning_time_s,
+        l_value=l_value,
+        settings=replace(settings, l_range=L_LIMITS),  # picks need not lie where the search looks
+        zero=start_time,
         recording=recording,
-        model=model,
-        ties=ties,
-        settings=settings,
-        receiver_latitude_rad=latitude_rad,
+        sightings=(Sighting(),) * len(items),
+        sferic_probability=0.0 if sferic_time_s is None else 1.0,
     )
-    return [replace(row, time=_clock(start_time, row.sferic_time_s)) for row in rows]
+    rows = fit_by_hand(task, {})
+    return _flagged(rows, list(traces.values()), earlier=[()] * len(rows))
 
 
-def _clock(start_time: datetime | None, time_s: float) -> str | None:
-    if start_time is None or not np.isfinite(time_s):
-        return None
-    return iso_time(start_time + timedelta(seconds=time_s))
+def refit(
+    rows: Sequence[WhistlerRow],
+    edits: Sequence[Edit] = (),
+    *,
+    settings: Settings | None = None,
+    hops: int | Sequence[int] | None = None,
+    free_time: bool = False,
+    sferic_time_s: float | None = None,
+    sferic_time_sd_s: float = SFERIC_SD_S,
+    lightning_time_s: float | None = None,
+    l_value: float | None = None,
+) -> list[WhistlerRow]:
+    """Return the rows of one measured stroke fitted again, after edits of their trace points.
+
+    Parameters
+    ----------
+    rows : sequence of WhistlerRow
+        All rows of one stroke; an edit's `trace` counts them from 1.
+    edits : sequence of Edit
+        In the order in which they are made; none accepts the points as they are.
+    settings : Settings, optional
+        Those of the measurement; the defaults if left out.
+    hops : int or sequence of int, optional
+        Field-line crossings of every row, or of each, in place of the measured ones.
+    free_time : bool
+        Whether to leave out the sferic that was identified.
+    sferic_time_s, sferic_time_sd_s : float, optional
+        Another causative sferic and its one-sigma.
+    lightning_time_s : float, optional
+        Time of the lightning itself, when it is known from elsewhere.
+    l_value : float, optional
+        L to hold the paths at.
+
+    Returns
+    -------
+    list of WhistlerRow
+        In the same order: with the flag ``edited`` where the points are not those of the row, and
+        ``group-edited`` where only those of another one are. What the search alone can tell,
+        strength and significance, stays as measured.
+
+    Raises
+    ------
+    UsageError
+        When the rows are of several strokes, an edit cannot be made, or a trace has fewer than
+        three points.
+    """
+    settings = settings or Settings()
+    _check_stroke(rows)
+    edited = apply_edits({str(k): row.trace for k, row in enumerate(rows, start=1)}, edits)
+    check_points(edited)
+    orders = hop_orders(hops, len(rows)) if hops is not None else tuple(row.hops for row in rows)
+    items = _items(rows, list(edited.values()), orders)
+    sferic_s = _sferic(sferic_time_s, sferic_time_sd_s)
+    probability = 0.0 if sferic_s is None else 1.0
+    if sferic_s is None and not free_time:
+        probability = rows[0].sferic_probability
+        if rows[0].sferic_seen:
+            sferic_s = (rows[0].sferic_time_s, rows[0].sferic_time_sd_s)
+    searched = any(np.isfinite(row.significance) for row in rows)
+    task = HandStroke(
+        items=items,
+        sferic_s=sferic_s,
+        lightning_time_s=lightning_time_s,
+        l_value=l_value,
+        settings=settings if searched else replace(settings, l_range=L_LIMITS),
+        zero=time_zero(rows),
+        recording=rows[0].recording,
+        group=rows[0].group,
+        sightings=tuple(_sighting(row) for row in rows),
+        sferic_probability=probability,
+        hop_probability=rows[0].hop_probability if hops is None else 1.0,
+    )
+    found = fit_by_hand(task, _known(rows, items) if l_value is None else {})
+    return _flagged(found, [row.trace for row in rows], earlier=[row.flags for row in rows])
 
 
-def _check(traces: dict[str, Trace]) -> None:
-    for name, trace in traces.items():
-        if len(np.unique(trace.frequency_hz)) < LEAST_POINTS:
-            reason = f"trace {name!r} has {len(trace.time_s)} points"
-            step = f"pick at least {LEAST_POINTS} different frequencies"
-            raise UsageError(Notice("E604", name, reason, step))
+def time_zero(rows: Sequence[WhistlerRow]) -> datetime | None:
+    """Return the time from which the rows' times count, UTC; None when they have no clock time."""
+    for row in rows:
+        if row.time is not None and np.isfinite(row.sferic_time_s):
+            return parse_time(row.time) - timedelta(seconds=row.sferic_time_s)
+    return None
 
 
-def _start(
-    item: PathTrace, ties: Ties, settings: Settings, year: float
-) -> tuple[float, float, float]:
-    """Best of a coarse grid over L and density, the time fitted or given: L, density, time."""
-    model = field_line_model(settings, decimal_year=year)
-    trace = item.trace
-    top_l = float(model.dipole.l_from_equatorial_gyrofrequency(1.1 * trace.frequency_hz.max()))
-    wanted = ties.l_value
-    l_grid = [wanted] if wanted else np.linspace(1.4, min(6.5, max(top_l, 1.5)), 40)
-    weight = 1.0 / trace.time_sd_s**2
-    best, least = (2.5, 1e9, 0.0), np.inf
-    for l_value in l_grid:
-        density = float(saturated_density(l_value)) * np.geomspace(0.03, 10.0, 60)
-        delay = item.hops * travel_time(
-            trace.frequency_hz, l_value=float(l_value), equatorial_density_m3=density, model=model
-        )
-        left = trace.time_s - delay
-        time_s = (left * weight).sum(axis=1) / weight.sum()
-        if ties.lightning_time_s is not None:
-            time_s = np.full(len(density), ties.lightning_time_s[0])
-        misfit = ((left - time_s[:, None]) ** 2 * weight).sum(axis=1)
-        k = int(np.argmin(misfit))
-        if misfit[k] < least:
-            best, least = (float(l_value), float(density[k]), float(time_s[k])), float(misfit[k])
-    return best
+def left_over_s(row: WhistlerRow, *, settings: Settings) -> FloatArray:
+    """Return trace minus model at each point of a row, s; NaN where L is not determined.
+
+    Parameters
+    ----------
+    row : WhistlerRow
+        As measured or fitted.
+    settings : Settings
+        What with.
+    """
+    if not np.isfinite([row.l_value, row.equatorial_density_cm3, row.lightning_time_s]).all():
+        return np.full(len(row.trace.time_s), np.nan)
+    return row.trace.time_s - model_curve(
+        row.trace.frequency_hz,
+        l_value=row.l_value,
+        density_m3=1e6 * row.equatorial_density_cm3,
+        hops=row.hops,
+        lightning_time_s=row.lightning_time_s,
+        model=field_line_model(settings, decimal_year=decimal_year(time_zero([row]))),
+    )
+
+
+def _flagged(
+    rows: Sequence[WhistlerRow], stored: Sequence[Trace], *, earlier: Sequence[Sequence[str]]
+) -> list[WhistlerRow]:
+    """Say which rows were edited, now or before, and which were only fitted with such."""
+    own = [
+        EDITED in flags or not same_points(row.trace, trace)
+        for row, trace, flags in zip(rows, stored, earlier, strict=True)
+    ]
+    if not any(own):
+        return list(rows)
+    words = [EDITED if edited else BESIDE_EDITED for edited in own]
+    return [replace(row, flags=(*row.flags, word)) for row, word in zip(rows, words, strict=True)]
+
+
+def _items(
+    rows: Sequence[WhistlerRow], traces: Sequence[Trace], orders: Sequence[int]
+) -> tuple[PathTrace, ...]:
+    """Give each trace its path: echoes share numbers, never a number of hops."""
+    paths: list[tuple[str, list[int]]] = []
+    items = []
+    for row, trace, order in zip(rows, traces, orders, strict=True):
+        key = repr((row.l_value, row.equatorial_density_cm3, row.dispersion_s_sqrt_hz))
+        place = len(paths)
+        if "echo" in row.flags:
+            shared = (
+                k for k, (other, used) in enumerate(paths) if other == key and order not in used
+            )
+            place = next(shared, place)
+        if place == len(paths):
+            paths.append((key if "echo" in row.flags else "", []))
+        paths[place][1].append(order)
+        share = row.centre_share_sd if np.isfinite(row.centre_share_sd) else 0.0
+        items.append(PathTrace(trace, order, place, share))
+    return tuple(items)
+
+
+def _known(rows: Sequence[WhistlerRow], items: Sequence[PathTrace]) -> dict[int, Start]:
+    """Start from the stored numbers of each path whose points and hops are as stored."""
+    known: dict[int, Start] = {}
+    changed = set()
+    for row, item in zip(rows, items, strict=True):
+        start = (row.l_value, 1e6 * row.equatorial_density_cm3, row.lightning_time_s)
+        known[item.path] = start
+        if item.hops != row.hops or not same_points(item.trace, row.trace):
+            changed.add(item.path)
+        if not np.isfinite(start).all():
+            changed.add(item.path)
+    return {path: start for path, start in known.items() if path not in changed}
+
+
+def _sighting(row: WhistlerRow) -> Sighting:
+    thickness_s = 2.0 * DIFFUSE_S if "diffuse" in row.flags else 0.0  # all that is kept of it
+    return Sighting(row.snr_db, row.significance, thickness_s)
+
+
+def _sferic(time_s: float | None, sd_s: float) -> tuple[float, float] | None:
+    if not sd_s > 0.0:
+        reason = f"{sd_s} s is not above 0"
+        raise UsageError(Notice("E601", "sferic_time_sd_s", reason, "give its one-sigma in s"))
+    return None if time_s is None else (time_s, sd_s)
+
+
+def _check_stroke(rows: Sequence[WhistlerRow]) -> None:
+    strokes = {(row.recording, row.group) for row in rows}
+    if len(strokes) != 1:
+        reason = f"rows of {len(strokes)} strokes" if strokes else "no rows"
+        raise UsageError(Notice("E609", "rows", reason, "hand in all rows of one group"))

@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import csv
 import math
+from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import TypeVar
 
 import numpy as np
 
@@ -14,6 +16,10 @@ from whistler.trace import Trace
 COLUMNS = ("frequency_hz", "time_s", "time_sd_s", "trace")
 DEFAULT_SD_S = 0.005  # a careful reading off a spectrogram
 DEFAULT_NAME = "1"
+RANGES = {"frequency_hz": (1.0, 1e5), "time_s": (-1e6, 1e6), "time_sd_s": (1e-6, 10.0)}
+"""Lowest and highest value of each number of a point."""
+
+Line = TypeVar("Line")
 
 
 def read_picks(path: Path) -> dict[str, Trace]:
@@ -36,68 +42,118 @@ def read_picks(path: Path) -> dict[str, Trace]:
     UsageError
         When the file cannot be read or a line of it is at fault; all faults are named by line.
     """
+
+    def refusal(reason: str) -> UsageError:
+        step = "correct the table (frequency_hz,time_s,...)"
+        return UsageError(Notice("E606", str(path), reason, step))
+
+    lines = read_table(path, _point, columns=COLUMNS, required=COLUMNS[:2], refusal=refusal)
+    if not lines:
+        raise refusal("no points")
+    points: dict[str, list[tuple[float, float, float]]] = {}
+    for name, point in lines:
+        points.setdefault(name, []).append(point)
+    return {name: _trace(items) for name, items in points.items()}
+
+
+def read_table(
+    path: Path,
+    read_line: Callable[[dict[str, str]], Line],
+    *,
+    columns: Sequence[str],
+    required: Sequence[str],
+    refusal: Callable[[str], UsageError],
+) -> list[Line]:
+    """Return what each line of a CSV file says, blank lines left out.
+
+    Parameters
+    ----------
+    path : Path
+        UTF-8 text with one header line; columns in any order.
+    read_line : callable
+        Takes the stripped cells of a line by column; raises ValueError when one is at fault.
+    columns, required : sequence of str
+        Columns that may, and that must be there.
+    refusal : callable
+        Takes a reason, returns the error to raise.
+    """
     try:
         text = Path(path).read_text(encoding="utf-8-sig")
     except (OSError, UnicodeDecodeError) as error:
         why = error.strerror if isinstance(error, OSError) else "not UTF-8 text"
-        raise _refusal(path, f"cannot be read ({why})") from error
+        raise refusal(f"cannot be read ({why})") from error
     lines = csv.reader(text.splitlines())
     header = [name.strip() for name in next(lines, [])]
-    _check_header(path, header)
-    points: dict[str, list[tuple[float, float, float]]] = {}
+    if wrong := _header_fault(header, columns, required):
+        raise refusal(f"line 1: {wrong}")
+    items: list[Line] = []
     faults: list[str] = []
     for number, cells in enumerate(lines, start=2):
         if not any(cell.strip() for cell in cells):
             continue
         try:
-            name, point = _point(dict(zip(header, cells, strict=True)))
-            points.setdefault(name, []).append(point)
+            if len(cells) != len(header):
+                raise ValueError("not as many cells as columns")
+            stripped = [cell.strip() for cell in cells]
+            items.append(read_line(dict(zip(header, stripped, strict=True))))
         except ValueError as error:
-            reason = "not as many cells as columns" if "zip()" in str(error) else str(error)
-            faults.append(f"line {number}: {reason}")
+            faults.append(f"line {number}: {error}")
     if faults:
         more = f" and {len(faults) - 3} more" if len(faults) > 3 else ""
-        raise _refusal(path, ", ".join(faults[:3]) + more)
-    if not points:
-        raise _refusal(path, "no points")
-    return {name: _trace(items) for name, items in points.items()}
+        raise refusal(", ".join(faults[:3]) + more)
+    return items
 
 
-def _check_header(path: Path, header: list[str]) -> None:
-    missing = [name for name in COLUMNS[:2] if name not in header]
-    unknown = [name for name in header if name not in COLUMNS]
-    if missing:
-        raise _refusal(path, f"line 1: no column {missing[0]!r}")
-    if unknown or len(set(header)) < len(header):
-        wrong = f"unknown column {unknown[0]!r}" if unknown else "a column appears twice"
-        raise _refusal(path, f"line 1: {wrong}")
+def number_in(text: str, name: str) -> float:
+    """Return the number that a text states, within the range of its column.
 
+    Parameters
+    ----------
+    text : str
+        As written.
+    name : str
+        A key of :data:`RANGES`.
 
-def _point(cells: dict[str, str]) -> tuple[str, tuple[float, float, float]]:
-    """Return trace name and (frequency, time, sigma) of one line."""
-    frequency_hz = _value(cells, "frequency_hz", low=1.0, high=1e5)
-    time_s = _value(cells, "time_s", low=-1e6, high=1e6)
-    time_sd_s = DEFAULT_SD_S
-    if cells.get("time_sd_s", "").strip():
-        time_sd_s = _value(cells, "time_sd_s", low=1e-6, high=10.0)
-    return cells.get("trace", "").strip() or DEFAULT_NAME, (frequency_hz, time_s, time_sd_s)
+    Raises
+    ------
+    ValueError
+        When it is not a number, or outside.
 
-
-def _value(cells: dict[str, str], name: str, *, low: float, high: float) -> float:
+    Examples
+    --------
+    >>> number_in("4e3", "frequency_hz")
+    4000.0
+    """
     try:
-        value = float(cells[name])
+        value = float(text)
     except ValueError:
-        raise ValueError(f"{name}={cells[name]!r} is not a number") from None
+        raise ValueError(f"{name}={text!r} is not a number") from None
+    low, high = RANGES[name]
     if not (math.isfinite(value) and low <= value <= high):
         raise ValueError(f"{name}={value:g} is outside {low:g} to {high:g}")
     return value
 
 
+def _header_fault(header: list[str], columns: Sequence[str], required: Sequence[str]) -> str:
+    missing = [name for name in required if name not in header]
+    unknown = [name for name in header if name not in columns]
+    if missing:
+        return f"no column {missing[0]!r}"
+    if unknown:
+        return f"unknown column {unknown[0]!r}"
+    return "a column appears twice" if len(set(header)) < len(header) else ""
+
+
+def _point(cells: dict[str, str]) -> tuple[str, tuple[float, float, float]]:
+    """Return trace name and (frequency, time, sigma) of one line."""
+    frequency_hz = number_in(cells["frequency_hz"], "frequency_hz")
+    time_s = number_in(cells["time_s"], "time_s")
+    time_sd_s = DEFAULT_SD_S
+    if cells.get("time_sd_s"):
+        time_sd_s = number_in(cells["time_sd_s"], "time_sd_s")
+    return cells.get("trace") or DEFAULT_NAME, (frequency_hz, time_s, time_sd_s)
+
+
 def _trace(points: list[tuple[float, float, float]]) -> Trace:
     columns = np.array(sorted(points), dtype=np.float64).T
     return Trace(frequency_hz=columns[0], time_s=columns[1], time_sd_s=columns[2])
-
-
-def _refusal(path: Path, reason: str) -> UsageError:
-    notice = Notice("E606", str(path), reason, "correct the table (frequency_hz,time_s,...)")
-    return UsageError(notice)

@@ -194,6 +194,24 @@ def load_station(path: Path) -> Station:
         raise UsageError(_notice(path, [f"cannot be read ({error.strerror})"])) from error
     except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
         raise UsageError(_notice(path, [f"is not TOML ({error})"])) from error
+    return station_from_dict(tree, path=path)
+
+
+def station_from_dict(tree: dict[str, Any], *, path: Path) -> Station:
+    """Return the station that the keys of a station file describe: back from ``to_dict``.
+
+    Parameters
+    ----------
+    tree : dict
+        Keys and tables as in the file.
+    path : Path
+        Where they come from, for messages.
+
+    Raises
+    ------
+    UsageError
+        When it holds an unknown key, a wrong type or a value outside its range.
+    """
     values: dict[str, Any] = {}
     faults: list[str] = []
     for dotted, value in _flatten(tree):
