@@ -22,8 +22,8 @@ from whistler.synthesis.truth import WhistlerTruth
 
 AFTER = 8000
 AT_HZ = 4000.0
-GAP_RANGE_S = (0.003, 0.080)
-EDGES_MS = (3.0, 6.0, 10.0, 15.0, 20.0, 30.0, 45.0, 80.0)
+GAP_RANGE_S = (0.003, 0.120)
+EDGES_MS = (3.0, 6.0, 10.0, 15.0, 20.0, 30.0, 45.0, 60.0, 80.0, 120.0)
 SINGLE = Campaign(
     l_range=(2.2, 3.8),
     snr_range_db=(10.0, 10.0),
@@ -143,13 +143,12 @@ def gap_figures(twins: list[Twin], title: str) -> list[Figure]:
     """Differences at which half and nine tenths are separated, and the shares in bins."""
     gap_ms = 1e3 * np.array([one.gap_s for one in twins])
     both = np.array([one.both for one in twins])
-    seed = np.array([one.seed for one in twins])
 
     def at_shares(index: np.ndarray) -> list[float]:
         curve = logistic(10.0 * np.log10(gap_ms[index]), both[index])
         return [10.0 ** (0.1 * curve.strength_db(share)) for share in (0.5, 0.9)]
 
-    values, ends = at_shares(np.arange(gap_ms.size)), resampled(seed, at_shares)
+    values, ends = at_shares(np.arange(gap_ms.size)), resampled(np.arange(both.size), at_shares)
     figures = [
         Figure(f"{share} separated, differing {title}", value, unit="ms", interval=interval)
         for share, value, interval in zip(("half", "90 %"), values, ends, strict=True)
