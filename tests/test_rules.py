@@ -85,6 +85,7 @@ WHISTLER_ORDER = [
     "injection",
     "completeness",
     "scores",
+    "scorefiles",
     "commands",
     "cli",
 ]

@@ -29,6 +29,7 @@ __all__ = [
     "Measured",
     "WhistlerRow",
     "catalogue_csv",
+    "cell_text",
     "document",
     "entry",
     "json_text",
@@ -156,11 +157,12 @@ def catalogue_csv(rows: Sequence[dict[str, Any]]) -> str:
     writer = csv.writer(out, lineterminator="\r\n")
     writer.writerow([column.name for column in COLUMNS])
     for row in rows:
-        writer.writerow([_cell(row[column.name]) for column in COLUMNS])
+        writer.writerow([cell_text(row[column.name]) for column in COLUMNS])
     return out.getvalue()
 
 
-def _cell(value: Any) -> str:
+def cell_text(value: Any) -> str:
+    """Return a plain value as a cell of CSV; text that a spreadsheet would run is made harmless."""
     if value is None:
         return MISSING
     if isinstance(value, bool):
@@ -201,7 +203,7 @@ def _parameter(column: Column, rows: Sequence[dict[str, Any]]) -> dict[str, Any]
         "description": column.description,
     }
     if not number:
-        cells = [_cell(row[column.name]).encode("utf-8", "backslashreplace") for row in rows]
+        cells = [cell_text(row[column.name]).encode("utf-8", "backslashreplace") for row in rows]
         parameter["length"] = max(map(len, cells), default=1) or 1
     return parameter
 

@@ -12,6 +12,7 @@ import typer
 
 from whistler import __version__
 from whistler.commands import common
+from whistler.commands.completeness import completeness
 from whistler.commands.fit import fit
 from whistler.commands.measure import measure
 from whistler.commands.night import night
@@ -49,7 +50,7 @@ def _whistler(
     """L-values and electron densities, with error bars, from VLF recordings of whistlers."""
 
 
-for command in (measure, night, fit, predict, synthesize):
+for command in (measure, night, fit, predict, synthesize, completeness):
     app.command()(command)
 
 

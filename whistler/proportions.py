@@ -241,3 +241,27 @@ def _weighed_crossings(
         crossings.append(place[:, None] + width * np.log(odds))
     score = np.array(scores).ravel()
     return np.array(crossings).ravel(), np.exp(score - score.max())
+
+
+@dataclass(frozen=True)
+class ShareCurves:
+    """Shares found, as they are drawn.
+
+    Parameters
+    ----------
+    thin, diffuse : tuple of Share
+        By strength, dB, for each kind of trace.
+    thin_crossings, diffuse_crossings : tuple of Crossing
+        Where half and nine tenths of each kind are found.
+    by_l : tuple of Share
+        By L, over all strengths and both kinds.
+    by_hour : tuple of Share
+        By hour of the day, UTC, likewise; empty when no recording's time is known.
+    """
+
+    thin: tuple[Share, ...]
+    diffuse: tuple[Share, ...]
+    thin_crossings: tuple[Crossing, ...]
+    diffuse_crossings: tuple[Crossing, ...]
+    by_l: tuple[Share, ...]
+    by_hour: tuple[Share, ...]
