@@ -12,7 +12,7 @@ from whistler.picks import DEFAULT_SD_S, RANGES
 from whistler.trace import Trace
 
 ACTIONS = ("drop", "move", "add", "accept")
-TOLERANCE_HZ = 100.0  # a quarter of the spacing of measured points: read off a figure, yet no guess
+TOLERANCE_HZ = 100.0  # points are measured every 400 Hz or more: near enough to read off a figure
 NAMED = 3  # nearest frequencies that a message names
 
 

@@ -71,7 +71,9 @@ def read_results(path: Path) -> SavedResults:
         tree = json.loads(text, parse_constant=_refuse_constant)
     except ValueError:
         tree = None  # not one document: a line for each row
-    if isinstance(tree, dict) and "whistlers" in tree:
+    if isinstance(tree, dict) and "group" not in tree:
+        if not isinstance(tree.get("whistlers"), list):
+            raise _refusal(path, "JSON without a list of whistlers")
         settings = settings_from_dict(tree.get("settings", {}), path=path)
         return SavedResults(path, _rows(path, tree["whistlers"]), settings)
     lines = [line for line in text.splitlines() if line.strip()]
@@ -135,17 +137,19 @@ def settings_from_dict(values: dict[str, Any], *, path: Path) -> Settings:
     >>> settings_from_dict(Settings(max_hops=3).to_dict(), path=Path("run.json")).max_hops
     3
     """
+    if not isinstance(values, dict) or not isinstance(values.get("options", {}), dict):
+        raise _refusal(path, "settings that are not an object")
     unknown = sorted(set(values) - {field.name for field in fields(Settings)})
     if unknown:
         raise _refusal(path, f"unknown setting {unknown[0]!r}")
     known = {name: _frozen(value) for name, value in values.items()}
-    if "station" in values:
+    if isinstance(values.get("station"), dict):
         known["station"] = station_from_dict(values["station"], path=path)
     if "options" in values:
         known["options"] = tuple((k, _frozen(v)) for k, v in values["options"].items())
     try:
         return Settings(**known)
-    except TypeError as error:
+    except (TypeError, AttributeError) as error:
         raise _refusal(path, f"a setting is of the wrong kind ({error})") from error
 
 
