@@ -74,7 +74,7 @@ def read_results(path: Path) -> SavedResults:
     if isinstance(tree, dict) and "group" not in tree:
         if not isinstance(tree.get("whistlers"), list):
             raise _refusal(path, "JSON without a list of whistlers")
-        settings = settings_from_dict(tree.get("settings", {}), path=path)
+        settings = _settings_in(tree, path)
         return SavedResults(path, _rows(path, tree["whistlers"]), settings)
     lines = [line for line in text.splitlines() if line.strip()]
     rows = _rows(path, lines, parse=lambda line: json.loads(line, parse_constant=_refuse_constant))
@@ -137,13 +137,14 @@ def settings_from_dict(values: dict[str, Any], *, path: Path) -> Settings:
     >>> settings_from_dict(Settings(max_hops=3).to_dict(), path=Path("run.json")).max_hops
     3
     """
-    if not isinstance(values, dict) or not isinstance(values.get("options", {}), dict):
+    tables = (values, *(values.get(name, {}) for name in ("station", "options")))
+    if not all(isinstance(part, dict) for part in tables):
         raise _refusal(path, "settings that are not an object")
     unknown = sorted(set(values) - {field.name for field in fields(Settings)})
     if unknown:
         raise _refusal(path, f"unknown setting {unknown[0]!r}")
     known = {name: _frozen(value) for name, value in values.items()}
-    if isinstance(values.get("station"), dict):
+    if "station" in values:
         known["station"] = station_from_dict(values["station"], path=path)
     if "options" in values:
         known["options"] = tuple((k, _frozen(v)) for k, v in values["options"].items())
@@ -238,11 +239,17 @@ def _run_settings(path: Path) -> Settings | None:
     if not path.exists():
         return None
     try:
-        return settings_from_dict(json.loads(_text(path))["settings"], path=path)
-    except (ValueError, KeyError, TypeError) as error:
-        if isinstance(error, UsageError):
-            raise
+        tree = json.loads(_text(path))
+    except ValueError as error:
         raise _refusal(path, "not the record of a run") from error
+    return _settings_in(tree, path)
+
+
+def _settings_in(tree: Any, path: Path) -> Settings:
+    values = tree.get("settings") if isinstance(tree, dict) else None
+    if not isinstance(values, dict):
+        raise _refusal(path, "no settings in it")
+    return settings_from_dict(values, path=path)
 
 
 def _refuse_constant(name: str) -> None:
