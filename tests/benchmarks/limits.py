@@ -24,6 +24,7 @@ sys.path.insert(0, str(Path(__file__).parents[1] / "pipeline"))
 from limits_decoys import decoys
 from limits_errors import astray, sigmas
 from limits_groups import groups, sferics
+from limits_joint import joint
 from limits_run import Options, Part
 from limits_separable import separable
 from limits_strength import diffuse, strength
@@ -38,6 +39,7 @@ PARTS: dict[str, Callable[[Options], Part]] = {
     "groups": groups,
     "sferics": sferics,
     "separable": separable,
+    "joint": joint,
 }
 
 

@@ -21,6 +21,7 @@ sys.path.insert(0, str(Path(__file__).parents[1] / "benchmarks"))
 from limits_decoys import causes, contents, decoy_scene
 from limits_errors import Bounded, astray_scene, coverage_figures, ratio_grid, tube_figures
 from limits_groups import Heard, calibration, joined, nearest, strokes
+from limits_joint import by_kind, mean_shares
 from limits_level import levels
 from limits_run import Job, Options, Part, jobs_until, measure_job, shared_out
 from limits_separable import SINGLE, delay_s, second_path, twin_scene
@@ -28,6 +29,7 @@ from limits_stats import Curve, bins, exact_interval, hourly_figure, logistic, r
 from limits_strength import DIFFUSE, THIN, curve_figures, diffuse_scene, share_at
 from ridge_bound import RidgeBound
 
+from tests.benchmarks.joint_gain import Gain
 from whistler.rows import WhistlerRow
 from whistler.synthesis.render import render
 from whistler.synthesis.truth import TraceTruth, WhistlerTruth
@@ -201,6 +203,17 @@ def test_errors_are_taken_relative_to_the_bound():
     grid = ratio_grid([sure, unsure, sure])
     assert [row[:3] for row in grid.rows] == [("2.6 to 3.2", "known", 3.0)]
     assert grid.rows[0][3] == pytest.approx(2.5)
+
+
+def test_joint_gains_are_averaged_by_kind_of_stroke():
+    """Identity: factors of 2 and 8 in theory are 4 together; errors shrunk by 3 reach two thirds."""
+    theory = [np.array([[2.0, 2.0], [1.0, 1.0]]), np.array([[8.0, 8.0], [1.0, 1.0]])]
+    errors, stated = np.array([[3.0, 3.0], [1.0, 1.0]]), np.array([[4.0, 2.5], [1.0, 1.0]])
+    gains = [Gain(sd, errors, stated) for sd in theory]
+    kinds = by_kind(["L 2.2, three paths", "L 2.5, three paths"], gains)
+    assert list(kinds) == ["three paths"]
+    shares = mean_shares(kinds["three paths"])
+    np.testing.assert_allclose(shares, [[2 / 3, 2 / 3], [1.0, 0.5]])
 
 
 def test_coverage_counts_rows_with_sigma_only():
