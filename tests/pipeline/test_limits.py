@@ -206,7 +206,7 @@ def test_errors_are_taken_relative_to_the_bound():
 
 
 def test_joint_gains_are_averaged_by_kind_of_stroke():
-    """Identity: factors of 2 and 8 in theory are 4 together; errors shrunk by 3 reach two thirds."""
+    """Identity: factors of 2 and 8 in theory are 4 together; errors shrunk by 3 reach 2/3 of it."""
     theory = [np.array([[2.0, 2.0], [1.0, 1.0]]), np.array([[8.0, 8.0], [1.0, 1.0]])]
     errors, stated = np.array([[3.0, 3.0], [1.0, 1.0]]), np.array([[4.0, 2.5], [1.0, 1.0]])
     gains = [Gain(sd, errors, stated) for sd in theory]
