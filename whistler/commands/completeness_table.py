@@ -27,11 +27,11 @@ def completeness_text(document: dict[str, Any]) -> str:
         Lines of at most 80 characters.
     """
     used = len(document["recordings"])
-    own_h = document["own_rows"]["live_time_s"] / HOUR_S
+    audio = _length(document["own_rows"]["live_time_s"])
     low_db, high_db = document["request"]["snr_range_db"]
     lines = [
         f"{document['injected']} whistlers of {low_db:g} to {high_db:g} dB injected into "
-        f"{own_h:.2f} h of {used} recording{'' if used == 1 else 's'}",
+        f"{audio} of {used} recording{'' if used == 1 else 's'}",
         "",
         *_beside(_table("thin, dB", document["by_strength_thin"]), _right(document)),
         "",
@@ -86,12 +86,17 @@ def _percent(item: dict[str, Any]) -> str:
 
 def _reached(document: dict[str, Any], kind: str) -> str:
     """Where the shares of one kind are reached."""
+    low_db, high_db = document["request"]["snr_range_db"]
     parts = []
     for item in document["strength_found"][kind]:
-        ends = ["?" if end is None else f"{end:.1f}" for end in item["interval_db"]]
-        at = item["strength_db"]
-        where = "not reached" if at is None else f"found at {at:.1f} dB ({ends[0]} to {ends[1]})"
-        parts.append(f"{100 * item['share']:.0f} % {where}")
+        share, at = f"{100 * item['share']:.0f} %", item["strength_db"]
+        if at is None:
+            parts.append(f"{share} not reached within {low_db:g} to {high_db:g} dB")
+            continue
+        low, high = item["interval_db"]
+        begin = f"under {low_db:g}" if low is None else f"{low:.1f}"
+        end = f"over {high_db:g}" if high is None else f"{high:.1f}"
+        parts.append(f"{share} found at {at:.1f} dB ({begin} to {end})")
     return ", ".join(parts)
 
 
@@ -134,7 +139,7 @@ def _rates(document: dict[str, Any]) -> list[str]:
 
 
 def _rate(title: str, item: dict[str, Any], of: str) -> str:
-    hours = f"{item['live_time_s'] / HOUR_S:.2f} h"
+    hours = _length(item["live_time_s"])
     if item["per_hour"] is None:
         return f"{title:<16}{item['count']} in {hours} {of}"
     low, high = (_number(end) for end in item["interval_per_hour"])
@@ -145,3 +150,8 @@ def _rate(title: str, item: dict[str, Any], of: str) -> str:
 def _number(value: float) -> str:
     """Return a number with two digits or more, never with an exponent."""
     return f"{value:.0f}" if value >= 10.0 else f"{value:.1f}" if value >= 1.0 else f"{value:.2g}"
+
+
+def _length(time_s: float) -> str:
+    """Return a length of time with its unit."""
+    return f"{time_s:.0f} s" if time_s < 0.1 * HOUR_S else f"{time_s / HOUR_S:.2f} h"

@@ -146,7 +146,7 @@ class Stroke:
     def __post_init__(self) -> None:
         """Check the ranges and the parity."""
         check_ranges(
-            self, lightning_time_s=(0, 1e5), sferic_strength=(0, 1e3), distance_offset_m=(-3e6, 3e6)
+            self, lightning_time_s=(0, 1e5), sferic_strength=(0, 1e3), distance_offset_m=(-2e7, 2e7)
         )
         if len({hop % 2 for path in self.paths for hop in path.hops}) != 1:
             raise refuse(
