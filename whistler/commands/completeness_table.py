@@ -35,7 +35,8 @@ def completeness_text(document: dict[str, Any]) -> str:
         "",
         *_beside(_table("thin, dB", document["by_strength_thin"]), _right(document)),
         "",
-        *(f"{name:<8}{_reached(document, name)}" for name in ("thin", "diffuse")),
+        *_reached(document, "thin"),
+        *_reached(document, "diffuse"),
         "",
         *_quality(document),
         "",
@@ -47,13 +48,13 @@ def completeness_text(document: dict[str, Any]) -> str:
 
 
 def _table(title: str, bins: Sequence[dict[str, Any]], *, hours: bool = False) -> list[str]:
-    """Lines of one table of shares, 38 characters wide."""
-    lines = [f"{title:>12} inj found  share  (95 %)"]
+    """Lines of one table of shares, 39 characters wide."""
+    lines = [f"{title:>13}  inj found share (95 %)"]
     for item in bins:
         low, high = item["low"], item["high"]
-        edges = f"{low:02.0f}-{high:02.0f}" if hours else f"{low:.4g} to {high:.4g}"
-        numbers = f"{item['injected']:3d} {item['found']:5d}"
-        lines.append(f"{edges:>12} {numbers} {_percent(item)}")
+        edges = f"{low:02.0f}-{high:02.0f}" if hours else f"{low:.3g} to {high:.3g}"
+        numbers = f"{item['injected']:4d} {item['found']:5d}"
+        lines.append(f"{edges:>13} {numbers} {_percent(item)}")
     return lines
 
 
@@ -73,18 +74,18 @@ def _beside(left: Sequence[str], right: Sequence[str]) -> list[str]:
     count = max(len(left), len(right))
     left = [*left, *[""] * (count - len(left))]
     right = [*right, *[""] * (count - len(right))]
-    return [f"{a:<40}{b}" for a, b in zip(left, right, strict=True)]
+    return [f"{a:<41}{b}" for a, b in zip(left, right, strict=True)]
 
 
 def _percent(item: dict[str, Any]) -> str:
-    """Share and interval, in per cent, 16 characters wide."""
+    """Share and interval, in per cent, 14 characters wide."""
     if item["share"] is None:
         return f"{'-':>5}"
     low, high = (100 * end for end in item["interval"])
-    return f"{100 * item['share']:3.0f} %  ({low:.0f}-{high:.0f})"
+    return f"{100 * item['share']:3.0f} % ({low:.0f}-{high:.0f})"
 
 
-def _reached(document: dict[str, Any], kind: str) -> str:
+def _reached(document: dict[str, Any], kind: str) -> list[str]:
     """Where the shares of one kind are reached."""
     low_db, high_db = document["request"]["snr_range_db"]
     parts = []
@@ -97,7 +98,7 @@ def _reached(document: dict[str, Any], kind: str) -> str:
         begin = f"under {low_db:g}" if low is None else f"{low:.1f}"
         end = f"over {high_db:g}" if high is None else f"{high:.1f}"
         parts.append(f"{share} found at {at:.1f} dB ({begin} to {end})")
-    return ", ".join(parts)
+    return [f"{'' if number else kind:<16}{text}" for number, text in enumerate(parts)]
 
 
 def _quality(document: dict[str, Any]) -> list[str]:
