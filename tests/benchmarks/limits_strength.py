@@ -95,7 +95,7 @@ def diffuse(options: Options) -> Part:
     figures = [
         Figure("injections", len(summary.pairs), unit=""),
         share_at(summary.pairs, PROMISED_DB, low=90.0),
-        *curve_figures(summary.pairs, ((0.5, np.inf), (0.9, np.inf))),
+        *curve_figures(summary.pairs, ((0.9, np.inf),)),  # half lies below the range
         *binned_figures(summary.pairs, (0, 2, 4, 6, 8, 10, 12)),
         *rate_figures(jobs, summary.pairs),
         hourly_figure("rows without a true trace", len(summary.extra), summary.minutes),
