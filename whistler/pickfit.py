@@ -178,7 +178,7 @@ def time_zero(rows: Sequence[WhistlerRow]) -> datetime | None:
 
 
 def left_over_s(row: WhistlerRow, *, settings: Settings) -> FloatArray:
-    """Return trace minus model at each point of a row, s; NaN where L is not determined.
+    """Return trace minus model at each point of a row, s; NaN where the row does not tell it.
 
     Parameters
     ----------
@@ -187,7 +187,8 @@ def left_over_s(row: WhistlerRow, *, settings: Settings) -> FloatArray:
     settings : Settings
         What with.
     """
-    if not np.isfinite([row.l_value, row.equatorial_density_cm3, row.lightning_time_s]).all():
+    numbers = (row.l_value, row.equatorial_density_cm3, row.lightning_time_s)
+    if not np.isfinite(numbers).all() or "profile-fitted" in row.flags:  # of a model of its own
         return np.full(len(row.trace.time_s), np.nan)
     return row.trace.time_s - model_curve(
         row.trace.frequency_hz,
