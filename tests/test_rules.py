@@ -106,7 +106,14 @@ DIMENSIONED = re.compile(
     r"|band|bandwidth|speed|velocity|angle|latitude|longitude|offset|period|width|field|height"
     r"|radius|interval|window|hop|path|resolution|uncertainty|moment|content|dispersion)(_sd)?$"
 )
-WITHOUT_UNIT = {"log_frequency", "log_time", "log_density", "sin_latitude"}  # of SI quantities
+WITHOUT_UNIT = {  # of SI quantities
+    "log_frequency",
+    "log_time",
+    "log_density",
+    "log_tube_content",
+    "log_tube_content_sd",
+    "sin_latitude",
+}
 
 
 def tracked() -> list[Path]:
