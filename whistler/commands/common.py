@@ -64,18 +64,18 @@ DensityFactorOption = Annotated[
 FitPriorOption = Annotated[
     str,
     typer.Option(
-        "--fit-prior", metavar="NAME", help="What enters every fit: none, or climatology (density)."
+        "--fit-prior", metavar="NAME", help="Density prior in every fit: none or climatology."
     ),
 ]
 FitPriorSdOption = Annotated[
     float, typer.Option("--fit-prior-sd", metavar="DEX", help="Its one-sigma, decades of density.")
 ]
 AlphaOption = Annotated[
-    float, typer.Option("--alpha", metavar="A", help="Density along the line goes as r^-A.")
+    float, typer.Option("--alpha", metavar="A", help="Density along the line: r^-A.")
 ]
 AlphaSdOption = Annotated[
     float,
-    typer.Option("--alpha-sd", metavar="SD", help="One-sigma of --alpha, for the (±) errors."),
+    typer.Option("--alpha-sd", metavar="SD", help="One-sigma of alpha, in (±)."),
 ]
 OverwriteOption = Annotated[
     bool, typer.Option("--overwrite", help="Replace a catalogue of something else.")
