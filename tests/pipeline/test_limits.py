@@ -18,6 +18,7 @@ from scoring import Pair, Scored, Summary, campaign_scene, describe_pair
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "benchmarks"))
 
+from limits import PARTS, document
 from limits_decoys import causes, contents, decoy_scene
 from limits_errors import Bounded, astray_scene, coverage_figures, ratio_grid, tube_figures
 from limits_groups import Heard, calibration, joined, nearest, strokes
@@ -288,13 +289,17 @@ def test_figures_and_tables_become_markdown_and_strict_json():
         Figure("sigma", math.inf, high=1.5, unit="", interval=(1.0, math.inf)),
     )
     grid = Grid("Bins", ("L", "share"), (("2 to 3", 91.04), ("3 to 4", math.nan)))
-    text = str(Part("Title", figures, (grid,), notes=("Note.",), oddities=("seed 1",)))
+    part = Part("Title", figures, (grid,), notes=("Note.",), oddities=("seed 1",))
+    text = str(part)
     assert "| share | 91 % (85 to 96) | at least 90 % | kept |" in text
     assert "| sigma | inf (1 to inf) | at most 1.5 | **missed** |" in text
     assert "| 3 to 4 | - |" in text
     assert "- seed 1" in text
     assert table("Title", figures) in text
-    document = json.loads(json.dumps([plain(one) for one in figures], allow_nan=False))
-    assert document[1]["value"] is None
-    assert document[1]["interval"] == [1.0, None]
-    assert json.dumps(grid.plain(), allow_nan=False)
+    document_figures = json.loads(json.dumps([plain(one) for one in figures], allow_nan=False))
+    assert document_figures[1]["value"] is None
+    assert document_figures[1]["interval"] == [1.0, None]
+    whole = json.loads(document({"made": part}))["made"]
+    assert whole["figures"] == document_figures
+    assert whole["tables"][0]["rows"][1] == ["3 to 4", None]
+    assert document(dict.fromkeys(PARTS, part)).count('"title": "Title"') == len(PARTS) == 9
