@@ -45,7 +45,7 @@ L_EDGES = (2.2, 2.6, 3.2, 3.8, 4.5)
 NORMAL = 1.4826  # standard deviation over median |x| of a normal distribution
 FAR_PULL = 5.0
 SIGMAS_NOTE = (
-    "The bound is for a mean of 10 dB over the matched cells; the strength set is a median of 10 dB "
+    "The bound is for a mean of 10 dB over matched cells; the strength set is a median of 10 dB "
     "over the band, whose mean is some 2 dB more (fading, tilt): a bound for that is 1.3 times "
     "smaller. The time counts as known to the bound where the row names a sferic. Rows without "
     "sigma count as infinite in ratios and are left out of coverage."
