@@ -30,11 +30,14 @@ class TravelTime:
         Travel time from foot to foot, s.
     jacobian : ndarray, shape (n, 3)
         Derivatives of the time with respect to ln L, ln neq and alpha, s.
+    layer_change_s : ndarray, shape (n,)
+        Derivative with respect to the logarithm of the layer's critical frequency, s.
     """
 
     frequency_hz: FloatArray
     time_s: FloatArray
     jacobian: FloatArray
+    layer_change_s: FloatArray
 
 
 def maximum_frequency(l_value: float, *, model: FieldLineModel) -> float:
@@ -206,7 +209,9 @@ def travel_time_jacobian(
     jacobian = np.stack(
         [by_length.sum(axis=0), scaled.sum(axis=0), (log_distance * scaled).sum(axis=0)], axis=1
     )
-    return TravelTime(frequency, (weight * group_index).sum(axis=0), jacobian)
+    # The layer's density goes as the square of its critical frequency.
+    by_layer = (2.0 * weight * layer_part * by_plasma).sum(axis=0)
+    return TravelTime(frequency, (weight * group_index).sum(axis=0), jacobian, by_layer)
 
 
 def quasi_longitudinal_travel_time(

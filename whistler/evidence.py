@@ -14,12 +14,14 @@ from fieldlines import FieldLineModel, saturated_density
 from fieldlines.constants import SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
 from whistler.fit import StrokeFit, fit_stroke
-from whistler.problem import PathTrace, sferic_at
+from whistler.problem import PathTrace, expected_log_density, sferic_at
+from whistler.scatter import declared_scatter
 from whistler.settings import Settings
 from whistler.sferic import READING_SD_S, SfericCatalogue, front_lag_s, possible_causes
 from whistler.trace import Trace
 
 HOP_PRIOR = (0.55, 0.25, 0.12, 0.05, 0.03, 0.01, 0.01, 0.01)  # our own estimate
+LOG_L_RANGE = (np.log(1.2), np.log(8.0))  # of the climatology
 STORM_SHARE = 0.1  # of the density prior, three times as wide: depleted and refilling tubes
 
 
@@ -115,17 +117,24 @@ def read_hops(item: FoundTrace, *, around: Surroundings) -> dict[int, Reading]:
     """
     settings = around.settings
     readings: dict[int, Reading] = {}
+    l_value, once_m3, start_s = item.l_value, item.density_m3, item.lightning_time_s
+    near: StrokeFit | None = None
     for hops in range(1, settings.max_hops + 1):
-        density = item.density_m3 / hops**2
-        if readings and _out_of_question(item.l_value, density, settings):
+        density = once_m3 / hops**2
+        if readings and _out_of_question(l_value, density, settings):
             continue
-        fit = fit_stroke(
+        fit = near = fit_stroke(
             [PathTrace(item.trace, hops, 0, item.centre_share_sd)],
-            start=[(item.l_value, density)],
-            lightning_time_s=item.lightning_time_s,
+            start=[(l_value, density)],
+            lightning_time_s=start_s,
             model=around.model,
             robust=False,
+            scatter=declared_scatter(settings),
+            near=near,
         )
+        # The next order begins where this one ended: as one hop of so many times the density.
+        (l_value, density), start_s = fit.start[0], fit.lightning_time_s
+        once_m3 = density * hops**2
         readings[hops] = weigh(fit, hops, around=around)
     return readings
 
@@ -165,7 +174,7 @@ def predicted_sferic(
         receiver_latitude_rad=receiver_latitude_rad,
     )
     place_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
-    variance = float(gradient @ fit.covariance @ gradient) + READING_SD_S**2 + place_s**2
+    variance = float(gradient @ fit.whole_covariance @ gradient) + READING_SD_S**2 + place_s**2
     return time_s, float(np.sqrt(variance)), gradient
 
 
@@ -192,15 +201,15 @@ def weigh(fit: StrokeFit, hops: int, *, around: Surroundings) -> Reading:
     )
     late_s = front_lag_s(predicted_s - fit.lightning_time_s, front_hz=around.sferics.front_hz)
     causes = possible_causes(around.sferics, predicted_s=predicted_s + late_s, sd_s=sd_s)
-    gain = fit.covariance @ gradient / sd_s**2
-    shift = (causes.time_s - late_s - predicted_s)[:, None] * gain
-    tied_sd = np.sqrt(max(fit.covariance[1, 1] - gain[1] * (fit.covariance @ gradient)[1], 0.0))
-    with_cause = _density_score(
-        fit.log_l[0] + shift[:, 0], fit.log_density[0] + shift[:, 1], float(tied_sd), settings
-    )
-    free = _density_score(
-        fit.log_l, fit.log_density, float(np.sqrt(fit.covariance[1, 1])), settings
-    )
+    # With a sferic the time is known better, and L and density move along their ridges with it.
+    covariance = fit.whole_covariance
+    gain = covariance @ gradient / sd_s**2
+    departure, by_x = _density_departure(fit, settings)
+    free_variance = float(by_x @ covariance @ by_x)
+    tied_variance = free_variance - float(by_x @ gain) ** 2 * sd_s**2
+    moved = departure + (causes.time_s - late_s - predicted_s) * float(by_x @ gain)
+    with_cause = _density_score(moved, tied_variance, settings)
+    free = _density_score(np.array([departure]), free_variance, settings)
     weight = np.append(causes.odds * np.exp(with_cause), np.exp(free[0]))
     share = weight / weight.sum()
     best = int(np.argmax(weight[:-1])) if len(causes.odds) else -1
@@ -213,19 +222,29 @@ def weigh(fit: StrokeFit, hops: int, *, around: Surroundings) -> Reading:
     )
 
 
-def _density_score(
-    log_l: FloatArray,
-    log_density: FloatArray,
-    log_density_sd: float,
-    settings: Settings,
-) -> FloatArray:
+def _density_departure(fit: StrokeFit, settings: Settings) -> tuple[float, FloatArray]:
+    """Mean over the paths of ln density less its prior, and the derivatives of that.
+
+    The paths of a stroke see one plasmasphere: together they depart from the climatology once.
+    """
+    paths = len(fit.log_l)
+    by_x = np.zeros(len(fit.covariance))
+    total = 0.0
+    for path, (log_l, log_density) in enumerate(zip(fit.log_l, fit.log_density, strict=True)):
+        clipped = float(np.clip(log_l, *LOG_L_RANGE))
+        expected, slope = expected_log_density(clipped, factor=settings.density_prior_factor)
+        total += (log_density - expected) / paths
+        by_x[2 * path : 2 * path + 2] = np.array([-slope, 1.0]) / paths
+    return total, by_x
+
+
+def _density_score(departure: FloatArray, variance: float, settings: Settings) -> FloatArray:
     """Log probability of a density under the prior: lognormal, with a wide share for storms."""
     if settings.density_prior == "none":
-        return np.zeros_like(log_l)
-    expected = np.log(saturated_density(np.exp(np.clip(log_l, np.log(1.2), np.log(8.0)))))
-    expected = expected + np.log(settings.density_prior_factor)
-    total = np.zeros_like(expected)
+        return np.zeros_like(departure)
+    total = np.zeros_like(departure)
     for share, factor in ((1.0 - STORM_SHARE, 1.0), (STORM_SHARE, 3.0)):
-        sd = np.hypot(factor * settings.density_prior_sd_dex * np.log(10.0), log_density_sd)
-        total += share * np.exp(-0.5 * ((log_density - expected) / sd) ** 2) / sd
+        prior_sd = factor * settings.density_prior_sd_dex * np.log(10.0)
+        sd = np.sqrt(prior_sd**2 + max(variance, 0.0))
+        total += share * np.exp(-0.5 * (departure / sd) ** 2) / sd
     return np.asarray(np.log(np.maximum(total, 1e-30)))

@@ -17,6 +17,7 @@ from scipy.optimize import OptimizeResult, least_squares
 from fieldlines import FieldLineModel, travel_time
 from fieldlines.errors import FloatArray
 from whistler.problem import FREE, TIME_UNIT_S, PathTrace, StrokeProblem, Ties
+from whistler.scatter import ModelScatter
 
 ROBUST_SCALE = 3.0
 TOLERANCE = 1e-7  # looser stops half-way along the ridge of L and density
@@ -36,7 +37,8 @@ class StrokeFit:
     lightning_time_s : float
         From the recording's first frame.
     covariance : ndarray, shape (2 paths + 1, 2 paths + 1)
-        Statistical covariance of ln L, ln density (path by path) and lightning time in s.
+        Statistical covariance of ln L, ln density (path by path) and lightning time in s: what the
+        noise of the points does to them.
     rms_s : ndarray, shape (traces,)
         Root mean square of trace minus model.
     chi_square, freedom : float, int
@@ -49,6 +51,13 @@ class StrokeFit:
         Largest residual of a tie, in sigmas.
     used : tuple of PathTrace
         The traces with only the points that were kept.
+    model : fieldlines.FieldLineModel
+        The model of the numbers: the default one, or what was fitted of it.
+    open_sigmas : ndarray, shape (2,) or (0,)
+        Fitted departures of what the model leaves open, in its declared one-sigmas.
+    total_covariance : ndarray
+        Covariance of ln L, ln density, time and these departures, with what the declared spreads of
+        the model and of the stroke's place leave open; the statistical part of it is `covariance`.
     """
 
     log_l: FloatArray
@@ -62,6 +71,9 @@ class StrokeFit:
     at_bound: NDArray[np.bool_]
     tie_misfit: float
     used: tuple[PathTrace, ...]
+    model: FieldLineModel
+    open_sigmas: FloatArray
+    total_covariance: FloatArray
 
     @property
     def start(self) -> list[tuple[float, float]]:
@@ -72,9 +84,15 @@ class StrokeFit:
         ]
 
     @property
+    def whole_covariance(self) -> FloatArray:
+        """Covariance as `covariance`, with what the declared spreads leave open."""
+        own = len(self.covariance)
+        return self.total_covariance[:own, :own]
+
+    @property
     def time_sd_s(self) -> float:
-        """One-sigma of the lightning time."""
-        return float(np.sqrt(self.covariance[-1, -1]))
+        """One-sigma of the lightning time, with what the declared spreads leave open."""
+        return float(np.sqrt(self.whole_covariance[-1, -1]))
 
 
 def fit_stroke(
@@ -86,6 +104,8 @@ def fit_stroke(
     ties: Ties = FREE,
     robust: bool = True,
     final: bool = True,
+    scatter: ModelScatter | None = None,
+    near: StrokeFit | None = None,
 ) -> StrokeFit:
     """Return L and density of every path of a stroke, and its time.
 
@@ -106,15 +126,22 @@ def fit_stroke(
         points that have been through it.
     final : bool
         Whether to finish with plain least squares; a robust pass alone is enough for a guess.
+    scatter : ModelScatter, optional
+        What of the model is to be fitted too, held near its default by its declared one-sigmas.
+    near : StrokeFit, optional
+        A fit whose departures from the model to start from.
 
     Returns
     -------
     StrokeFit
         With covariance scaled by the misfit where that exceeds the stated sigmas.
     """
-    problem = StrokeProblem(traces, ties, model, lightning_time_s)
+    problem = StrokeProblem(traces, ties, model, lightning_time_s, scatter)
     low, high = problem.limits()
-    x = np.append(np.log(np.array(start)).ravel(), np.zeros(1 + len(traces)))
+    x = np.zeros(problem.size)
+    x[: problem.clock] = np.log(np.array(start)).ravel()
+    if near is not None and len(near.open_sigmas) == problem.size - problem.open:
+        x[problem.open :] = near.open_sigmas
     x = np.clip(x, low + 1e-6, high - 1e-6)
     limits = (low, high)
     found = None
@@ -140,6 +167,7 @@ def _solve(
         x,
         problem.jacobian,
         bounds=bounds,
+        method="dogbox",  # follows bent ridges in fewer steps than the trust region's ellipsoids
         loss=loss,
         f_scale=ROBUST_SCALE,
         x_scale="jac",
@@ -171,21 +199,28 @@ def _summary(
     high: FloatArray,
 ) -> StrokeFit:
     residual, jacobian = problem.evaluate(x)
-    used = problem.clock + 1
+    points = sum(int(kept.sum()) for kept in problem.kept) + len(problem.traces)
+    opened = problem.size - problem.open
     freedom = max(len(residual) - len(x), 1)
     chi_square = float(residual @ residual)
-    covariance = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)[:used, :used]
-    covariance *= max(1.0, chi_square / freedom) * (1.0 + SMALL_SAMPLE / freedom)
-    unit = np.ones(used)
-    unit[-1] = TIME_UNIT_S
-    points = sum(int(kept.sum()) for kept in problem.kept) + len(problem.traces)
-    ties = np.abs(residual[points:])
+    scale = max(1.0, chi_square / freedom) * (1.0 + SMALL_SAMPLE / freedom)
+    noise = _noise_share(problem, len(residual), points)
+    # Declared spreads are no measurements: a misfit does not widen them.
+    jacobian = jacobian / np.sqrt(1.0 + (scale - 1.0) * noise)[:, None]
+    wanted = [*range(problem.clock + 1), *range(problem.open, problem.size)]
+    unit = np.ones(problem.size)
+    unit[problem.clock] = TIME_UNIT_S
+    unit = np.outer(unit, unit)[np.ix_(wanted, wanted)]
+    total = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)
+    from_noise = total @ (jacobian.T * noise) @ jacobian @ total
+    own = problem.clock + 1
+    ties = np.abs(residual[points + opened :])
     near = np.minimum(x - low, high - x)[: problem.clock].reshape(-1, 2) < 1e-3
     return StrokeFit(
         log_l=x[0 : problem.clock : 2],
         log_density=x[1 : problem.clock : 2],
         lightning_time_s=problem.epoch_s + float(x[problem.clock]) * TIME_UNIT_S,
-        covariance=covariance * np.outer(unit, unit),
+        covariance=(from_noise[np.ix_(wanted, wanted)] * unit)[:own, :own],
         rms_s=problem.rms_s(x),
         chi_square=chi_square,
         freedom=freedom,
@@ -193,7 +228,25 @@ def _summary(
         at_bound=np.asarray(near.any(axis=1)),
         tie_misfit=float(ties.max()) if len(ties) else 0.0,
         used=problem.used(),
+        model=problem.model_at(x),
+        open_sigmas=x[problem.open :],
+        total_covariance=total[np.ix_(wanted, wanted)] * unit,
     )
+
+
+def _noise_share(problem: StrokeProblem, count: int, points: int) -> FloatArray:
+    """How much of each residual's spread is noise; the rest is a declared spread.
+
+    The default is taken to be true by the statistical covariance: what pulls towards it, the spread
+    of the model and of the stroke's place, adds nothing to that.
+    """
+    share = np.ones(count)
+    first_tie = points + problem.size - problem.open
+    share[points:first_tie] = 0.0
+    sferic = problem.ties.sferic
+    if sferic is not None:
+        share[first_tie] = sferic.sd_s**2 / (sferic.sd_s**2 + sferic.place_sd_s**2)
+    return share
 
 
 def model_curve(

@@ -13,12 +13,17 @@ import numpy as np
 from fieldlines import FieldLineModel
 from whistler.evidence import FoundTrace, Reading, Surroundings, read_hops, weigh
 from whistler.fit import StrokeFit, fit_stroke
-from whistler.problem import PathTrace, SfericTime, Ties
+from whistler.problem import PathTrace, SfericTime
+from whistler.scatter import declared_scatter
 from whistler.settings import Settings
 from whistler.sferic import READING_SD_S, SfericCatalogue
 
 TRAIN_PRIOR = 0.1  # share of traces with an echo partner in sight (our own estimate)
 LAG_SHARE = 0.2  # of the front's lag behind light, not known better than that
+PATHS_A_STROKE = 0.4  # further paths that a stroke lights (our own estimate)
+STROKE_RATE_HZ = 0.2  # of strokes heard as whistlers in a busy hour (our own estimate)
+JOINING_ODDS = 3.0
+HOPELESS = 8.0  # in the logarithm: an order so much less likely than the best is not tried
 SURE = 0.9  # probability from which a sferic is taken as identified
 MODEL_FLOOR = np.array(
     [0.008, 0.03, 0.0015]
@@ -38,7 +43,7 @@ class Stroke:
     traces : tuple of PathTrace
         The members as fitted.
     fit : StrokeFit
-        Joint fit.
+        Joint fit of the traces alone, with what the model leaves open.
     sferic : SfericTime or None
         The identified causative sferic.
     sferic_probability : float
@@ -141,7 +146,7 @@ def _train_bonus(first: Reading, second: Reading) -> float:
     difference = second.mean - first.mean
     if abs(difference[2]) > 0.2:
         return -np.inf
-    spread = first.fit.covariance + second.fit.covariance + np.diag(MODEL_FLOOR**2)
+    spread = first.fit.whole_covariance + second.fit.whole_covariance + np.diag(MODEL_FLOOR**2)
     sign, log_det = np.linalg.slogdet(2 * np.pi * spread)
     if sign <= 0:
         return -np.inf
@@ -179,12 +184,40 @@ def _connect(
 
 
 def _same_stroke(first: Reading, second: Reading) -> bool:
+    """Whether two traces began together, by their times or by their sferics."""
     if first.best_cause >= 0 and first.best_cause == second.best_cause:
-        return min(first.cause_probability, second.cause_probability) > 0.3
-    apart = abs(first.fit.lightning_time_s - second.fit.lightning_time_s)
-    spread = float(np.hypot(first.fit.time_sd_s, second.fit.time_sd_s))
-    both_sure = min(first.cause_probability, second.cause_probability) > SURE
-    return not both_sure and apart < 2.5 * spread + 0.001 and spread < 0.01
+        if min(first.cause_probability, second.cause_probability) > 0.3:
+            return True
+    elif min(first.cause_probability, second.cause_probability) > SURE:
+        return False
+    apart_s, sd_s = _apart(first.fit, second.fit)
+    density = np.exp(-0.5 * (apart_s / sd_s) ** 2) / (np.sqrt(2.0 * np.pi) * sd_s)
+    return bool(PATHS_A_STROKE * density > JOINING_ODDS * STROKE_RATE_HZ)
+
+
+def _apart(first: StrokeFit, second: StrokeFit) -> tuple[float, float]:
+    """How much later the second trace began, and the one-sigma of that, under one common model.
+
+    What the model leaves open moves the times of neighbouring paths alike: it is one for both.
+    """
+    size = 2 + len(first.open_sigmas)
+    information, pull = np.zeros((size, size)), np.zeros(size)
+    information[2:, 2:] = np.eye(size - 2)  # the declared spread, once
+    epoch_s = first.lightning_time_s
+    for place, fit in enumerate((first, second)):
+        clock = len(fit.covariance) - 1
+        here = np.arange(clock, len(fit.total_covariance))
+        own = np.linalg.inv(fit.total_covariance[np.ix_(here, here)])
+        mean = np.append(fit.lightning_time_s - epoch_s, fit.open_sigmas)
+        into = np.array([place, *range(2, size)])
+        pull[into] += own @ mean
+        own[1:, 1:] -= np.eye(size - 2)
+        information[np.ix_(into, into)] += own
+    covariance = np.linalg.inv(information)
+    mean = covariance @ pull
+    difference = np.zeros(size)
+    difference[:2] = (-1.0, 1.0)
+    return float(difference @ mean), float(np.sqrt(difference @ covariance @ difference))
 
 
 def _paths(members: list[int], partners: dict[tuple[int, int], float]) -> dict[int, int]:
@@ -205,54 +238,63 @@ def _fit_group(
     around: Surroundings,
 ) -> Stroke:
     path = _paths(members, partners)
-    traces = [
-        PathTrace(found[k].trace, hops[k], path[k], found[k].centre_share_sd) for k in members
-    ]
     first_of = {p: k for k, p in reversed(path.items())}
-    singles = [readings[first_of[p]][hops[first_of[p]]].fit for p in sorted(first_of)]
-    free = fit_stroke(
-        traces,
-        start=[single.start[0] for single in singles],
-        lightning_time_s=float(np.mean([single.lightning_time_s for single in singles])),
-        model=around.model,
-    )
-    reading = weigh(free, hops[members[0]], around=around)
-    sferic, fit = None, free
-    if reading.cause_probability > SURE:
-        sferic = SfericTime(
-            float(around.sferics.time_s[reading.best_cause]) - reading.sferic_lag_s,
-            float(np.hypot(READING_SD_S, LAG_SHARE * reading.sferic_lag_s)),
-            hops[members[0]] % 2 == 1,
-            around.receiver_latitude_rad,
+
+    def joint(orders: dict[int, int]) -> tuple[tuple[PathTrace, ...], Reading]:
+        traces = tuple(
+            PathTrace(found[k].trace, orders[k], path[k], found[k].centre_share_sd) for k in members
         )
+        singles = [readings[k][orders[k]].fit for _, k in sorted(first_of.items())]
+        if len(members) == 1:
+            return traces, readings[members[0]][orders[members[0]]]
         fit = fit_stroke(
             traces,
-            start=free.start,
-            lightning_time_s=free.lightning_time_s,
+            start=[single.start[0] for single in singles],
+            lightning_time_s=float(np.mean([single.lightning_time_s for single in singles])),
             model=around.model,
-            ties=Ties(sferic),
+            scatter=declared_scatter(around.settings),
+            near=singles[0],
         )
+        return traces, weigh(fit, orders[members[0]], around=around)
+
+    chosen = {k: hops[k] for k in members}
+    if len(set(chosen.values())) > 1 or any(set(pair) <= set(members) for pair in partners):
+        traces, reading = joint(chosen)
+        probability = 1.0  # an echo has told the orders: the ratio of the delays has spoken
+    else:
+        tried = {h: joint(dict.fromkeys(members, h)) for h in _thinkable(members, readings)}
+        order, probability = _likeliest_order({h: item[1].score for h, item in tried.items()})
+        traces, reading = tried[order]
     return Stroke(
         tuple(members),
-        tuple(hops[k] for k in members),
-        tuple(traces),
-        fit,
-        sferic,
+        tuple(item.hops for item in traces),
+        traces,
+        reading.fit,
+        _sferic(reading, traces[0].hops, around),
         reading.cause_probability,
-        _hop_probability(members, readings, hops, partners),
+        probability,
     )
 
 
-def _hop_probability(
-    members: list[int],
-    readings: list[dict[int, Reading]],
-    hops: list[int],
-    partners: dict[tuple[int, int], float],
-) -> float:
-    """Probability of the chosen orders; traces of one order speak for it together."""
-    if len({hops[k] for k in members}) > 1 or any(set(pair) <= set(members) for pair in partners):
-        return 1.0  # an echo train: the ratio of the delays has spoken
-    orders = set.intersection(*(set(readings[k]) for k in members))
-    scores = np.array([sum(readings[k][order].score for k in members) for order in sorted(orders)])
-    share = np.exp(scores - scores.max())
-    return float(share[sorted(orders).index(hops[members[0]])] / share.sum())
+def _sferic(reading: Reading, hops: int, around: Surroundings) -> SfericTime | None:
+    """The identified sferic, when there is one."""
+    if reading.cause_probability <= SURE:
+        return None
+    return SfericTime(
+        float(around.sferics.time_s[reading.best_cause]) - reading.sferic_lag_s,
+        float(np.hypot(READING_SD_S, LAG_SHARE * reading.sferic_lag_s)),
+        hops % 2 == 1,
+        around.receiver_latitude_rad,
+    )
+
+
+def _thinkable(members: list[int], readings: list[dict[int, Reading]]) -> list[int]:
+    """Orders that every trace allows and that are not hopeless for the traces as a whole."""
+    orders = sorted(set.intersection(*(set(readings[k]) for k in members)))
+    score = {h: sum(readings[k][h].score for k in members) / len(members) for h in orders}
+    return [h for h in orders if score[h] > max(score.values()) - HOPELESS]
+
+
+def _likeliest_order(scores: dict[int, float]) -> tuple[int, float]:
+    best = max(scores, key=lambda hops: scores[hops])
+    return best, 1.0 / sum(float(np.exp(score - scores[best])) for score in scores.values())

@@ -103,7 +103,10 @@ class _Profile:
         self.best, self.least = self._settle(start, np.arange(self.problem.size), MOST_STEPS)
         jacobian = self.problem.jacobian(self.best)
         self.spread = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)
-        self.scale = fit.covariance[0, 0] / self.spread[0, 0]
+        # What the fit's sigmas are wider by, for few points and misfit, or narrower, without what
+        # the stroke's place adds: the rise is counted in the same.
+        used = np.arange(self.problem.clock)
+        self.scale = fit.covariance[used, used] / self.spread[used, used]
 
     def rise(self, unknown: int, value: float, *, steps: int = MOST_STEPS) -> float:
         """Root of the rise of the misfit where an unknown has a value, in sigmas."""
@@ -112,7 +115,7 @@ class _Profile:
         start = np.clip(start, self.low, self.high)
         others = np.delete(np.arange(len(start)), unknown)
         _, misfit = self._settle(start, others, steps)
-        return float(np.sqrt(max(misfit - self.least, 0.0) / self.scale))
+        return float(np.sqrt(max(misfit - self.least, 0.0) / self.scale[unknown]))
 
     def departs(self, unknown: int, step: float) -> bool:
         """Whether the rise at twice a step of one sigma is not that of a parabola."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -13,12 +13,14 @@ from whistler.group import SURE, Stroke
 from whistler.likelihood import PathIntervals, path_intervals
 from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN
+from whistler.scatter import declared_scatter
 from whistler.settings import Settings
+from whistler.settle import leaning
 from whistler.uncertainty import (
     LEANING,
     ProfilePart,
     data_share,
-    profile_covariance,
+    profile_part,
     tube_content_gradient,
     uncertainty_status,
 )
@@ -36,7 +38,7 @@ class PathNumbers:
         L, its two one-sigmas, its interval of 95 %.
     density_m3, density_sd_m3, density_profile_sd_m3, density_low_m3, density_high_m3 : float
         The same of the density.
-    log_tube_content_sd, log_tube_content_profile_sd : float
+    log_tube_sd, log_tube_profile_sd : float
         One-sigmas of ln tube content.
     correlation : float
         Of ln L and ln density.
@@ -60,8 +62,8 @@ class PathNumbers:
     density_profile_sd_m3: float = NAN
     density_low_m3: float = NAN
     density_high_m3: float = NAN
-    log_tube_content_sd: float = NAN
-    log_tube_content_profile_sd: float = NAN
+    log_tube_sd: float = NAN
+    log_tube_profile_sd: float = NAN
     correlation: float = NAN
     status: str = "undetermined"
     leaning: StrokeFit | None = None
@@ -69,47 +71,26 @@ class PathNumbers:
     curved: bool = False
 
 
-def with_fit_prior(
-    stroke: Stroke, ties: Ties, *, model: FieldLineModel, settings: Settings
-) -> tuple[Stroke, Ties]:
-    """Return a stroke fitted again with the density prior that the settings declare, and its ties.
-
-    Parameters
-    ----------
-    stroke : Stroke
-        The stroke as grouped, without a density prior.
-    ties : Ties
-        The ties of its fit.
-    model : fieldlines.FieldLineModel
-        The default model.
-    settings : Settings
-        With `fit_prior`; when that is ``"none"``, both come back as they are.
-    """
-    if settings.fit_prior == "none":
-        return stroke, ties
-    ties = _leaning(ties, settings, sd_dex=settings.fit_prior_sd_dex)
-    return replace(stroke, fit=_refit(stroke.traces, stroke.fit, model, ties)), ties
-
-
 def path_numbers(
-    stroke: Stroke, *, model: FieldLineModel, ties: Ties, settings: Settings
+    stroke: Stroke, opened: StrokeFit, *, ties: Ties, settings: Settings
 ) -> list[PathNumbers]:
     """Return the numbers of each path of a stroke.
 
     Parameters
     ----------
     stroke : Stroke
-        The fitted stroke.
-    model : fieldlines.FieldLineModel
-        The default model.
+        The settled stroke.
+    opened : StrokeFit
+        Its traces with what the model leaves open fitted too.
     ties : Ties
         The ties of the fit.
     settings : Settings
         Declared one-sigmas and priors.
     """
-    part = profile_covariance(stroke.fit, model=model, ties=ties, settings=settings)
+    part = profile_part(stroke.fit, opened, scatter=declared_scatter(settings))
     return [
-        _numbers(stroke, path, part, model, ties, settings) for path in range(len(stroke.fit.log_l))
+        _numbers(stroke, path, part, stroke.fit.model, ties, settings)
+        for path in range(len(stroke.fit.log_l))
     ]
 
 
@@ -152,7 +133,7 @@ def _determined(
     covariance = fit.covariance[2 * path : 2 * path + 2, 2 * path : 2 * path + 2]
     correlation = float(covariance[0, 1] / np.sqrt(covariance[0, 0] * covariance[1, 1]))
     # One side may be farther than the other; what is passed on keeps the correlation.
-    slope = tube_content_gradient(fit, path, model=model)
+    slope = tube_content_gradient(fit, path)
     slope *= (intervals.log_l.sd, intervals.log_density.sd)
     content = slope @ np.array([[1.0, correlation], [correlation, 1.0]]) @ slope
     free = ties.l_value is None
@@ -167,8 +148,8 @@ def _determined(
         density_profile_sd_m3=density_m3 * float(np.sqrt(part.log_density[path])),
         density_low_m3=float(np.exp(intervals.log_density.low)),
         density_high_m3=float(np.exp(intervals.log_density.high)),
-        log_tube_content_sd=float(np.sqrt(max(content, 0.0))),
-        log_tube_content_profile_sd=float(np.sqrt(part.log_tube_content[path])),
+        log_tube_sd=float(np.sqrt(max(content, 0.0))),
+        log_tube_profile_sd=float(np.sqrt(part.log_tube[path])),
         correlation=correlation if free else NAN,
         status="ok",
         curved=intervals.curved,
@@ -184,20 +165,15 @@ def _with_prior(
     settings: Settings,
 ) -> PathNumbers:
     """Lean on the climatology where the trace alone is too weak, and say so; no sigma then."""
-    leaning = fit
+    with_prior = fit
     if ties.density_prior_dex is None:
         if settings.density_prior == "none":
             return PathNumbers()
-        ties = _leaning(ties, settings, sd_dex=settings.density_prior_sd_dex)
-        leaning = _refit(traces, fit, model, ties)
-    if uncertainty_status(leaning, path, l_range=settings.l_range, leniency=LEANING) != "ok":
+        ties = leaning(ties, settings, sd_dex=settings.density_prior_sd_dex)
+        with_prior = _refit(traces, fit, model, ties)
+    if uncertainty_status(with_prior, path, l_range=settings.l_range, leniency=LEANING) != "ok":
         return PathNumbers()
-    return _without_sigmas(leaning, path)
-
-
-def _leaning(ties: Ties, settings: Settings, *, sd_dex: float) -> Ties:
-    factor = settings.density_prior_factor
-    return replace(ties, density_prior_dex=sd_dex, density_prior_factor=factor)
+    return _without_sigmas(with_prior, path)
 
 
 def _refit(

@@ -1,7 +1,8 @@
 """What a stroke's traces say about L, density and time: residuals and their derivatives.
 
-The unknowns are ln L and ln density of each path, the lightning time in milliseconds, and for each
-trace where it lies within its thickness, in sigmas of that: every one of order one.
+The unknowns are ln L and ln density of each path, the lightning time in milliseconds, for each
+trace where it lies within its thickness, and, when asked for, what the model leaves open, both in
+sigmas of that: every one of order one.
 """
 
 from __future__ import annotations
@@ -15,6 +16,7 @@ from numpy.typing import NDArray
 from fieldlines import FieldLineModel, saturated_density, travel_time_jacobian
 from fieldlines.constants import EARTH_RADIUS_M, SPEED_OF_LIGHT_M_S
 from fieldlines.errors import FloatArray
+from whistler.scatter import COUNT, ModelScatter
 from whistler.trace import Trace
 
 TIME_UNIT_S = 1e-3
@@ -61,12 +63,16 @@ class SfericTime:
         Whether the stroke was in the conjugate hemisphere.
     receiver_latitude_rad : float, optional
         Geomagnetic latitude of the receiver, when it is known.
+    place_sd_s : float
+        One-sigma of its way from not knowing where the stroke was. The fit leans on the sferic only
+        so much; what comes of it is in the profile part of the errors, not in the statistical one.
     """
 
     time_s: float
     sd_s: float
     odd_hops: bool
     receiver_latitude_rad: float | None = None
+    place_sd_s: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -218,18 +224,27 @@ class StrokeProblem:
         Field, profile and ions.
     epoch_s : float
         Zero of the lightning time, from the recording's first frame.
+    scatter : ModelScatter, optional
+        What of the model is to be fitted too; by default it is taken as it is.
     """
 
     def __init__(
-        self, traces: Sequence[PathTrace], ties: Ties, model: FieldLineModel, epoch_s: float
+        self,
+        traces: Sequence[PathTrace],
+        ties: Ties,
+        model: FieldLineModel,
+        epoch_s: float,
+        scatter: ModelScatter | None = None,
     ) -> None:
         self.traces = traces
         self.ties = ties
         self.model = model
         self.epoch_s = epoch_s
+        self.scatter = scatter
         self.paths = 1 + max(item.path for item in traces)
         self.clock = 2 * self.paths  # place of the time among the unknowns; trace centres follow
-        self.size = self.clock + 1 + len(traces)
+        self.open = self.clock + 1 + len(traces)  # place of what the model leaves open
+        self.size = self.open + (COUNT if scatter else 0)
         self.kept = [np.ones(len(item.trace.time_s), bool) for item in traces]
         self._last: tuple[FloatArray, FloatArray, FloatArray] | None = None
 
@@ -262,7 +277,7 @@ class StrokeProblem:
     def rms_s(self, x: FloatArray) -> FloatArray:
         """Return the root mean square of trace minus model, each without its own shift."""
         unshifted = x.copy()
-        unshifted[self.clock + 1 :] = 0.0
+        unshifted[self.clock + 1 : self.open] = 0.0
         time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
         return np.array(
             [
@@ -280,7 +295,7 @@ class StrokeProblem:
         )
 
     def _evaluate(self, x: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Traces first, then where each lies within its thickness, then ties."""
+        """Traces first, then where each lies within its thickness and the model, then ties."""
         time_s = self.epoch_s + x[self.clock] * TIME_UNIT_S
         parts = [self._trace_part(number, kept, x, time_s) for number, kept in enumerate(self.kept)]
         centres = np.arange(self.clock + 1, self.size)
@@ -295,11 +310,11 @@ class StrokeProblem:
     ) -> tuple[FloatArray, FloatArray]:
         item = self.traces[number]
         trace, first, centre = item.trace, 2 * item.path, self.clock + 1 + number
+        frequency_hz = trace.frequency_hz[kept]
+        l_value, density_m3 = (float(value) for value in np.exp(x[first : first + 2]))
+        model = self.model_at(x)
         delay = travel_time_jacobian(
-            trace.frequency_hz[kept],
-            l_value=float(np.exp(x[first])),
-            equatorial_density_m3=float(np.exp(x[first + 1])),
-            model=self.model,
+            frequency_hz, l_value=l_value, equatorial_density_m3=density_m3, model=model
         )
         sd = trace.time_sd_s[kept]
         row = np.zeros((len(sd), len(x)))
@@ -307,6 +322,9 @@ class StrokeProblem:
         row[:, first : first + 2] = -stretch * delay.jacobian[:, :2] / sd[:, None]
         row[:, self.clock] = -TIME_UNIT_S / sd
         row[:, centre] = -item.hops * item.centre_share_sd * delay.time_s / sd
+        if self.scatter is not None:
+            by_open = self.scatter.delay_changes_s(delay, model)
+            row[:, self.open :] = -stretch * by_open / sd[:, None]
         return (trace.time_s[kept] - time_s - stretch * delay.time_s) / sd, row
 
     def _tie_parts(self, x: FloatArray, time_s: float) -> list[tuple[FloatArray, FloatArray]]:
@@ -320,7 +338,8 @@ class StrokeProblem:
             )
             by_x = np.pad(slope, (0, self.size - len(slope)))
             by_x[self.clock] *= TIME_UNIT_S
-            parts.append(_tie(ties.sferic.time_s - predicted_s, by_x, ties.sferic.sd_s))
+            sd_s = float(np.hypot(ties.sferic.sd_s, ties.sferic.place_sd_s))
+            parts.append(_tie(ties.sferic.time_s - predicted_s, by_x, sd_s))
         if ties.lightning_time_s is not None:
             wanted_s, sd_s = ties.lightning_time_s
             parts.append(_tie(wanted_s - time_s, TIME_UNIT_S * _unit(self.size, self.clock), sd_s))
@@ -335,6 +354,10 @@ class StrokeProblem:
                 parts.append(_tie(expected - x[first + 1], by_x, sd))
         return parts
 
+    def model_at(self, x: FloatArray) -> FieldLineModel:
+        """Return the model at the unknowns `x`."""
+        return self.scatter.moved(self.model, x[self.open :]) if self.scatter else self.model
+
     def limits(self) -> tuple[FloatArray, FloatArray]:
         """Return the lowest and highest value of each unknown; L keeps the traces below fHeq."""
         low = np.full(self.size, -np.inf)
@@ -347,4 +370,6 @@ class StrokeProblem:
             middle = float(np.log(saturated_density(MIDDLE_L)))
             low[2 * item.path + 1] = middle - np.log(DENSITY_LIMIT)
             high[2 * item.path + 1] = middle + np.log(DENSITY_LIMIT)
+        if self.scatter is not None:
+            low[self.open :], high[self.open :] = self.scatter.limits(self.model)
         return low, high

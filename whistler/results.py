@@ -17,10 +17,11 @@ from fieldlines import (
 from whistler.evidence import predicted_sferic
 from whistler.fit import StrokeFit
 from whistler.group import SURE, Stroke
-from whistler.pathnumbers import PathNumbers, path_numbers, with_fit_prior
+from whistler.pathnumbers import PathNumbers, path_numbers
 from whistler.problem import PathTrace, Ties
 from whistler.rows import NAN, WhistlerRow
 from whistler.settings import Settings
+from whistler.settle import settled
 
 DIFFUSE_S = 0.010  # thickness from which a trace is called diffuse
 AMBIGUOUS = 0.5  # probability of the likeliest sferic from which a doubt is worth a flag
@@ -82,8 +83,8 @@ def stroke_rows(
     list of WhistlerRow
         In the order of the stroke's traces; `time` is left to the caller, who knows the clock.
     """
-    stroke, ties = with_fit_prior(stroke, ties, model=model, settings=settings)
-    numbers = path_numbers(stroke, model=model, ties=ties, settings=settings)
+    stroke, opened, ties = settled(stroke, ties, model=model, settings=settings)
+    numbers = path_numbers(stroke, opened, ties=ties, settings=settings)
     return [
         _row(
             stroke,
@@ -92,7 +93,6 @@ def stroke_rows(
             sighting,
             recording=recording,
             group=group,
-            model=model,
             settings=settings,
             ties=ties,
             receiver_latitude_rad=receiver_latitude_rad,
@@ -109,7 +109,6 @@ def _row(
     *,
     recording: str,
     group: int,
-    model: FieldLineModel,
     settings: Settings,
     ties: Ties,
     receiver_latitude_rad: float | None,
@@ -152,7 +151,7 @@ def _row(
         uncertainty_status=found.status,
         flags=_flags(stroke, item, sighting, found=found, ties=ties),
         trace=item.trace,
-        **asdict(_derived(fit, item.path, found, model)),
+        **asdict(_derived(fit, item.path, found)),
     )
 
 
@@ -169,9 +168,10 @@ class _Derived:
     tube_content_profile_sd_m2: float = NAN
 
 
-def _derived(fit: StrokeFit, path: int, found: PathNumbers, model: FieldLineModel) -> _Derived:
+def _derived(fit: StrokeFit, path: int, found: PathNumbers) -> _Derived:
     """Derive from the fitted model; D0 is well fixed even where L is not."""
     l_value, density_m3 = fit.start[path]
+    model = fit.model
     try:
         dispersion = zero_frequency_dispersion(
             l_value, equatorial_density_m3=density_m3, model=model
@@ -188,8 +188,8 @@ def _derived(fit: StrokeFit, path: int, found: PathNumbers, model: FieldLineMode
             tip.time_s,
             maximum_frequency(l_value, model=model),
             content_m2,
-            content_m2 * found.log_tube_content_sd,
-            content_m2 * found.log_tube_content_profile_sd,
+            content_m2 * found.log_tube_sd,
+            content_m2 * found.log_tube_profile_sd,
         )
     except DomainError:  # a fit that ended on a limit may lie outside a formula's range
         return _Derived()
@@ -205,6 +205,8 @@ def _flags(
         words.append("l-given")
     if ties.density_prior_dex is not None:
         words.append("density-prior")
+    if stroke.fit.open_sigmas.size:
+        words.append("profile-fitted")
     if found.curved:
         words.append("curved-ridge")
     if sum(other.path == item.path for other in stroke.traces) > 1:

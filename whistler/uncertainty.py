@@ -6,12 +6,11 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from fieldlines import ChapmanLayer, FieldLineModel, tube_content
-from fieldlines.constants import SPEED_OF_LIGHT_M_S
+from fieldlines import FieldLineModel, tube_content
 from fieldlines.errors import FloatArray
-from whistler.fit import StrokeFit, fit_stroke
+from whistler.fit import StrokeFit
 from whistler.problem import Ties, expected_log_density
-from whistler.settings import Settings
+from whistler.scatter import ModelScatter
 
 # One-sigmas of ln L and ln density beyond which the numbers are not those of the trace. Where a
 # trace says so little, sigma itself depends on where along the valley of good fits the noise put L,
@@ -20,7 +19,7 @@ UNDETERMINED_LOG_L = 0.05
 UNDETERMINED_LOG_DENSITY = 0.3
 MISFIT = 25.0  # chi-square per degree of freedom: points five of their sigmas off
 TIE_MISFIT = 5.0  # sigmas
-SMALLEST_SHARE = 0.3  # of a layer's frequency or height that a variation leaves
+SHAPE = 1.2  # real profiles are no power laws: the sigma from those is so much too small (estimate)
 STEP = 1e-4  # of a logarithm, where a derivative is taken by differences
 LEANING = 2.0  # a fit that leans on the density prior may be so many times as wide
 
@@ -31,66 +30,74 @@ class ProfilePart:
 
     Parameters
     ----------
-    log_l, log_density, log_tube_content : ndarray, shape (paths,)
+    log_l, log_density, log_tube : ndarray, shape (paths,)
         Variances of ln L, ln density and ln tube content.
     """
 
     log_l: FloatArray
     log_density: FloatArray
-    log_tube_content: FloatArray
+    log_tube: FloatArray
 
 
-def profile_covariance(
-    fit: StrokeFit,
-    *,
-    model: FieldLineModel,
-    ties: Ties,
-    settings: Settings,
-) -> ProfilePart:
+def profile_part(fit: StrokeFit, opened: StrokeFit, *, scatter: ModelScatter) -> ProfilePart:
     """Return the variances of L, density and tube content from what the model leaves open.
 
     Parameters
     ----------
     fit : StrokeFit
-        The fit under the default model.
-    model : fieldlines.FieldLineModel
-        The default model.
-    ties : Ties
-        The ties of the fit.
-    settings : Settings
-        Declared one-sigmas: density exponent, foF2, hmF2, stroke distance.
+        The fit that the numbers are from.
+    opened : StrokeFit
+        The same traces with what the model leaves open fitted too; may be `fit` itself.
+    scatter : ModelScatter
+        The declared spreads that `opened` was fitted with.
 
     Returns
     -------
     ProfilePart
-        Half the change of the fit between plus and minus one sigma of each source, squared and
-        summed; each end's tube content is that of its own model, L and density.
+        Mean square of what the numbers change by when the model is any of those that the traces
+        allow: how far `opened` is from `fit`, squared, and what of its covariance is not noise.
+
+    Notes
+    -----
+    With departures z of the model, of which the traces leave mean m and covariance S, and numbers
+    that change by b per unit of them, the mean square is ``b (m m' + S) b'``: that of the declared
+    spread where the traces say nothing of the model, and little where the nose is in the band.
     """
-    total = np.zeros((len(fit.log_l), 3))
-    for low, high in _model_pairs(model, ties, settings):
-        ends = [
-            _fitted_logs(
-                fit_stroke(
-                    fit.used,
-                    start=fit.start,
-                    lightning_time_s=fit.lightning_time_s,
-                    model=varied,
-                    ties=tie,
-                    robust=False,
-                ),
-                varied,
-            )
-            for varied, tie in (low, high)
-        ]
-        total += (0.5 * (ends[1] - ends[0])) ** 2
-    return ProfilePart(*total.T)
+    own = len(fit.covariance)
+    left = np.diag(opened.total_covariance)[: own - 1] - np.diag(fit.covariance)[:-1]
+    moved = np.stack([opened.log_l - fit.log_l, opened.log_density - fit.log_density])
+    content = np.array(
+        [_content_part(fit, opened, path, scatter) for path in range(len(fit.log_l))]
+    )
+    left = np.maximum(left, 0.0)
+    return ProfilePart(
+        SHAPE**2 * (left[0::2] + moved[0] ** 2),
+        SHAPE**2 * (left[1::2] + moved[1] ** 2),
+        SHAPE**2 * content,
+    )
 
 
-def _fitted_logs(fit: StrokeFit, model: FieldLineModel) -> FloatArray:
-    """Logarithms of L, density and tube content, shape (paths, 3)."""
-    pairs = zip(fit.log_l, fit.log_density, strict=True)
-    content = [log_tube_content(log_l, log_density, model=model) for log_l, log_density in pairs]
-    return np.stack([fit.log_l, fit.log_density, np.array(content)], axis=1)
+def _content_part(fit: StrokeFit, opened: StrokeFit, path: int, scatter: ModelScatter) -> float:
+    own, place = len(fit.covariance), [2 * path, 2 * path + 1]
+    slope = tube_content_gradient(opened, path)
+    whole = np.append(slope, _content_by_model(opened, path, scatter))
+    wide = [*place, *range(own, len(opened.total_covariance))]
+    variance = float(whole @ opened.total_covariance[np.ix_(wide, wide)] @ whole)
+    noise = float(slope @ fit.covariance[np.ix_(place, place)] @ slope)
+    moved = _log_content(opened, path) - _log_content(fit, path)
+    return max(variance - noise, 0.0) + moved**2
+
+
+def _content_by_model(fit: StrokeFit, path: int, scatter: ModelScatter) -> FloatArray:
+    """Change of ln tube content with what the model leaves open, per sigma, shape (2,)."""
+    step = 0.1
+    here = _log_content(fit, path)
+    variants = [replace(fit, model=scatter.moved(fit.model, step * one)) for one in np.eye(2)]
+    return np.array([(_log_content(varied, path) - here) / step for varied in variants])
+
+
+def _log_content(fit: StrokeFit, path: int) -> float:
+    return log_tube_content(fit.log_l[path], fit.log_density[path], model=fit.model)
 
 
 def log_tube_content(log_l: float, log_density: float, *, model: FieldLineModel) -> float:
@@ -101,7 +108,7 @@ def log_tube_content(log_l: float, log_density: float, *, model: FieldLineModel)
     return float(np.log(content))
 
 
-def tube_content_gradient(fit: StrokeFit, path: int, *, model: FieldLineModel) -> FloatArray:
+def tube_content_gradient(fit: StrokeFit, path: int) -> FloatArray:
     """Return the derivatives of ln tube content in ln L and ln density of one path, shape (2,).
 
     Parameters
@@ -110,15 +117,13 @@ def tube_content_gradient(fit: StrokeFit, path: int, *, model: FieldLineModel) -
         The fit.
     path : int
         Index of the path.
-    model : fieldlines.FieldLineModel
-        Its model.
     """
     at = np.array([fit.log_l[path], fit.log_density[path]])
     return np.array(
         [
             (
-                log_tube_content(*(at + step), model=model)
-                - log_tube_content(*(at - step), model=model)
+                log_tube_content(*(at + step), model=fit.model)
+                - log_tube_content(*(at - step), model=fit.model)
             )
             / (2.0 * STEP)
             for step in STEP * np.eye(2)
@@ -151,43 +156,6 @@ def data_share(fit: StrokeFit, path: int, *, ties: Ties) -> float:
     gradient = np.array([-slope, 1.0])
     after = gradient @ fit.covariance[2 * path : 2 * path + 2, 2 * path : 2 * path + 2] @ gradient
     return float(1.0 - after / (ties.density_prior_dex * np.log(10.0)) ** 2)
-
-
-_Variant = tuple[FieldLineModel, Ties]
-
-
-def _model_pairs(
-    model: FieldLineModel, ties: Ties, settings: Settings
-) -> list[tuple[_Variant, _Variant]]:
-    """The model one sigma below and above its default, source by source."""
-    pairs: list[tuple[_Variant, _Variant]] = []
-    exponents = [
-        max(model.density_exponent + sign * settings.density_exponent_sd, 0.0) for sign in (-1, 1)
-    ]
-    low, high = (replace(model, density_exponent=value) for value in exponents)
-    pairs.append(((low, ties), (high, ties)))
-    if model.layer is not None:
-        for name, spread in (
-            ("critical_frequency_hz", settings.critical_frequency_sd_hz),
-            ("peak_altitude_m", settings.peak_altitude_sd_m),
-        ):
-            low, high = (
-                replace(model, layer=_shifted(model.layer, name, sign * spread)) for sign in (-1, 1)
-            )
-            pairs.append(((low, ties), (high, ties)))
-    if ties.sferic is not None:
-        way_s = settings.stroke_distance_sd_m / SPEED_OF_LIGHT_M_S
-        early, late = (
-            replace(ties, sferic=replace(ties.sferic, time_s=ties.sferic.time_s + sign * way_s))
-            for sign in (-1, 1)
-        )
-        pairs.append(((model, early), (model, late)))
-    return pairs
-
-
-def _shifted(layer: ChapmanLayer, name: str, by: float) -> ChapmanLayer:
-    value = getattr(layer, name)
-    return replace(layer, **{name: max(value + by, SMALLEST_SHARE * value)})
 
 
 def uncertainty_status(

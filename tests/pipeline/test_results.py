@@ -158,7 +158,7 @@ def test_what_the_profile_leaves_open_at_l_2_5(
 def test_profile_sigma_is_what_a_wrong_profile_does(model: FieldLineModel) -> None:
     """Recovery: fitted with an exponent of one sigma more, L and density move by as much.
 
-    With nothing else left open, to 15 %: the sigma is half of the way from minus to plus one.
+    With nothing else left open, to 15 %, times the 1.2 that stands for profiles of other shapes.
     """
     only = {"fo_f2_sd_mhz": 0.0, "hm_f2_sd_km": 0.0, "stroke_distance_sd_m": 0.0}
     rows = [
@@ -172,8 +172,8 @@ def test_profile_sigma_is_what_a_wrong_profile_does(model: FieldLineModel) -> No
         for exponent in (1.0, 1.65)
     ]
     moved = [abs(getattr(rows[1], name) - getattr(rows[0], name)) for name in NUMBERS]
-    assert rows[0].l_value_profile_sd == pytest.approx(moved[0], rel=0.15)
-    assert rows[0].equatorial_density_profile_sd_cm3 == pytest.approx(moved[1], rel=0.15)
+    assert rows[0].l_value_profile_sd == pytest.approx(1.2 * moved[0], rel=0.15)
+    assert rows[0].equatorial_density_profile_sd_cm3 == pytest.approx(1.2 * moved[1], rel=0.15)
 
 
 def test_stroke_distance_counts_where_a_sferic_ties(model: FieldLineModel) -> None:
