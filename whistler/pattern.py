@@ -22,8 +22,10 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
+LEAST_SD_S = 4e-5
 CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
-LAG_SD = 0.3  # in units of one over the band width; measured on synthetic ducts
+LAG_SD = 0.215  # of strong sub-bands, in units of one over the band width; from synthetic ducts
+NOISE_LAG_SD = 1.5  # in the same units, at a peak as strong as the noise; falls with its root
 
 
 @dataclass(frozen=True)
@@ -36,6 +38,8 @@ class Alignment:
         Lag of each sub-band; the pattern's centre included.
     correlation : ndarray, shape (bands,)
         Of each sub-band with the mean of the others, 0 to 1.
+    strength : ndarray, shape (bands,)
+        Peak power of each sub-band over its noise.
     width_share : float
         RMS width of the pattern as a share of the travel time.
     centre_share_sd : float
@@ -44,13 +48,16 @@ class Alignment:
 
     lag_s: FloatArray
     correlation: FloatArray
+    strength: FloatArray
     width_share: float
     centre_share_sd: float
 
     def lag_sd_s(self, band_width_hz: float) -> FloatArray:
-        """Return the one-sigma of each lag: larger the less a sub-band looks like the others."""
+        """Return the one-sigma of each lag: larger for weak bands, and those unlike the others."""
         unlike = np.sqrt(np.maximum(1.0 - self.correlation**2, 0.01))
-        return LAG_SD / band_width_hz * unlike / np.maximum(self.correlation, 0.1) + 5e-5
+        by_shape = LAG_SD * unlike / np.maximum(self.correlation, 0.1)
+        by_noise = NOISE_LAG_SD / np.sqrt(self.strength)
+        return np.asarray(np.hypot(by_shape, by_noise) / band_width_hz + LEAST_SD_S)
 
 
 def align(
@@ -86,6 +93,7 @@ def align(
     return Alignment(
         lag_s=(shift_s + centre_s) * travel_s / reference_s,
         correlation=correlation,
+        strength=view.power.max(axis=1),
         width_share=width_s / reference_s,
         centre_share_sd=CENTRE_SD * width_s / reference_s / np.sqrt(cells),
     )

@@ -19,7 +19,9 @@ UNDETERMINED_LOG_L = 0.05
 UNDETERMINED_LOG_DENSITY = 0.3
 MISFIT = 25.0  # chi-square per degree of freedom: points five of their sigmas off
 TIE_MISFIT = 5.0  # sigmas
-SHAPE = 1.2  # real profiles are no power laws: the sigma from those is so much too small (estimate)
+SHAPE = (
+    1.3  # real profiles are no power laws; what the sigma from those is widened by (our estimate)
+)
 STEP = 1e-4  # of a logarithm, where a derivative is taken by differences
 LEANING = 2.0  # a fit that leans on the density prior may be so many times as wide
 

@@ -147,10 +147,10 @@ def test_what_the_profile_leaves_open_at_l_2_5(
     model: FieldLineModel, known: dict[str, float]
 ) -> None:
     """Reference (published scatter of the density index 0.65, which makes some 16 % of density at
-    L 2.5, with the ionosphere some 20 %, from the notes on limits): 5 to 30 %, L 0.5 to 3 %."""
+    L 2.5, with the ionosphere some 20 %, from the notes on limits; times 1.3): 5 to 35 %, L 0.5 to 3 %."""
     row = picked(model, 2.5, band_hz=(1200.0, 9000.0), sd_s=0.0005, **known)
     assert row.uncertainty_status == "ok"
-    assert 0.05 < row.equatorial_density_profile_sd_cm3 / row.equatorial_density_cm3 < 0.30
+    assert 0.05 < row.equatorial_density_profile_sd_cm3 / row.equatorial_density_cm3 < 0.35
     assert 0.005 < row.l_value_profile_sd / row.l_value < 0.03
     assert row.equatorial_density_sd_cm3 < row.equatorial_density_profile_sd_cm3
 
@@ -158,7 +158,7 @@ def test_what_the_profile_leaves_open_at_l_2_5(
 def test_profile_sigma_is_what_a_wrong_profile_does(model: FieldLineModel) -> None:
     """Recovery: fitted with an exponent of one sigma more, L and density move by as much.
 
-    With nothing else left open, to 15 %, times the 1.2 that stands for profiles of other shapes.
+    With nothing else left open, to 15 %, times the 1.3 that stands for profiles of other shapes.
     """
     only = {"fo_f2_sd_mhz": 0.0, "hm_f2_sd_km": 0.0, "stroke_distance_sd_m": 0.0}
     rows = [
@@ -172,8 +172,8 @@ def test_profile_sigma_is_what_a_wrong_profile_does(model: FieldLineModel) -> No
         for exponent in (1.0, 1.65)
     ]
     moved = [abs(getattr(rows[1], name) - getattr(rows[0], name)) for name in NUMBERS]
-    assert rows[0].l_value_profile_sd == pytest.approx(1.2 * moved[0], rel=0.15)
-    assert rows[0].equatorial_density_profile_sd_cm3 == pytest.approx(1.2 * moved[1], rel=0.15)
+    assert rows[0].l_value_profile_sd == pytest.approx(1.3 * moved[0], rel=0.15)
+    assert rows[0].equatorial_density_profile_sd_cm3 == pytest.approx(1.3 * moved[1], rel=0.15)
 
 
 def test_stroke_distance_counts_where_a_sferic_ties(model: FieldLineModel) -> None:
