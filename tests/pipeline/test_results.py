@@ -147,7 +147,8 @@ def test_what_the_profile_leaves_open_at_l_2_5(
     model: FieldLineModel, known: dict[str, float]
 ) -> None:
     """Reference (published scatter of the density index 0.65, which makes some 16 % of density at
-    L 2.5, with the ionosphere some 20 %, from the notes on limits; times 1.3): 5 to 35 %, L 0.5 to 3 %."""
+    L 2.5, with the ionosphere some 20 %, from the notes on limits; times 1.3): 5 to 35 %, and of
+    L 0.5 to 3 %."""
     row = picked(model, 2.5, band_hz=(1200.0, 9000.0), sd_s=0.0005, **known)
     assert row.uncertainty_status == "ok"
     assert 0.05 < row.equatorial_density_profile_sd_cm3 / row.equatorial_density_cm3 < 0.35

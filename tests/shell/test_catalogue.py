@@ -22,9 +22,9 @@ from whistler.settings import Settings
 
 # The keys of a row as users and scripts rely on them, in order, written out here once more.
 CONTRACT = (
-    "recording group sferic_time_s sferic_time_sd_s sferic_seen sferic_probability lightning_time_s time "
-    "hops hop_probability l_value "
-    "l_value_sd l_value_profile_sd l_value_low l_value_high equatorial_density_cm3 "
+    "recording group sferic_time_s sferic_time_sd_s sferic_seen sferic_probability "
+    "lightning_time_s time hops hop_probability l_value l_value_sd l_value_profile_sd "
+    "l_value_low l_value_high equatorial_density_cm3 "
     "equatorial_density_sd_cm3 equatorial_density_profile_sd_cm3 equatorial_density_low_cm3 "
     "equatorial_density_high_cm3 l_density_correlation dispersion_s_sqrt_hz nose_frequency_hz "
     "nose_time_s equatorial_gyrofrequency_hz tube_content_m2 tube_content_sd_m2 "
