@@ -29,8 +29,6 @@ from whistler.trace import (
 WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
 LEAST_SPAN_HZ = 1500.0
-LEAST_POINTS = 6
-MANY_BANDS = 10  # that even a narrow band is split into
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 WIDEST_GAP = 2.5  # inside a trace, in sub-bands
 FEWEST_TIMED = 4
@@ -43,6 +41,29 @@ PATTERN_ROUNDS = 2
 FEWEST_BANDS = 7  # made of a short band
 LEAST_BANDS = 5  # that must share the pattern
 LEAST_CORRELATION = 0.5
+
+
+@dataclass(frozen=True)
+class Split:
+    """How a trace's band is split up.
+
+    Parameters
+    ----------
+    spacing_hz : float
+        Between sub-bands.
+    least_bands : int
+        That even a narrow band is split into.
+    least_points : int
+        Of these, that must be timed.
+    """
+
+    spacing_hz: float
+    least_bands: int
+    least_points: int
+
+
+FINE = Split(SUB_BAND_HZ, 10, 6)
+COARSE = Split(700.0, 7, 5)  # pulses of weak traces stand out more from wider sub-bands
 
 
 @dataclass(frozen=True)
@@ -129,6 +150,24 @@ def follow(
     Detection or None
         A trace spans at least 1.5 kHz, and half of its sub-bands were timed.
     """
+    for split in (FINE, COARSE):
+        found = _followed(candidate, audio, spectrogram, model, windows_s, split)
+        if found is not None:
+            reading, path = _sharpen(audio, found[0], path=found[1], model=model)
+            snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
+            return Detection(candidate, reading, path, snr_db)
+    return None
+
+
+def _followed(
+    candidate: Candidate,
+    audio: CleanAudio,
+    spectrogram: Spectrogram,
+    model: FieldLineModel,
+    windows_s: tuple[float, ...],
+    split: Split,
+) -> tuple[TraceReading, OneHop] | None:
+    """The trace as its sub-bands show it, when they bear it out."""
     path = _start(candidate, model)
     thickness_s: float | None = None
     reading = None
@@ -138,7 +177,7 @@ def follow(
             audio,
             path.curve(model),
             band_hz=band_hz,
-            spacing_hz=min(SUB_BAND_HZ, (band_hz[1] - band_hz[0]) / MANY_BANDS),
+            spacing_hz=min(split.spacing_hz, (band_hz[1] - band_hz[0]) / split.least_bands),
             reach_s=WIDEST_S,
         )
         if view is None:
@@ -157,11 +196,9 @@ def follow(
         fit, path = _refit(reading.trace, path, model)
         if fit.at_bound[0]:
             return None
-    if reading is None or not (_borne_out(reading) and _as_found(candidate, path, model)):
+    if reading is None or not _borne_out(reading, split.least_points):
         return None
-    reading, path = _sharpen(audio, reading, path=path, model=model)
-    snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
-    return Detection(candidate, reading, path, snr_db)
+    return (reading, path) if _as_found(candidate, path, model) else None
 
 
 def _start(candidate: Candidate, model: FieldLineModel) -> OneHop:
@@ -213,11 +250,11 @@ def _in_one_piece(reading: TraceReading) -> TraceReading | None:
     return replace(reading, trace=own, snr=reading.snr[run])
 
 
-def _borne_out(reading: TraceReading) -> bool:
+def _borne_out(reading: TraceReading, least_points: int) -> bool:
     """Whether enough sub-bands, over a wide enough band, carry a fair share of the power."""
     strong = reading.snr >= WEAK_SHARE * np.quantile(reading.snr, 0.75)
     frequency_hz = reading.trace.frequency_hz[strong]
-    if len(frequency_hz) < LEAST_POINTS:
+    if len(frequency_hz) < least_points:
         return False
     span_hz = frequency_hz[-1] - frequency_hz[0]
     spacing_hz = float(np.min(np.diff(reading.trace.frequency_hz)))
