@@ -17,7 +17,7 @@ from whistler.handfit import HandStroke, Start, check_points, fit_by_hand, hop_o
 from whistler.model import field_line_model
 from whistler.problem import L_LIMITS, PathTrace
 from whistler.results import DIFFUSE_S, Sighting
-from whistler.rows import WhistlerRow
+from whistler.rows import WhistlerRow, row_model
 from whistler.settings import Settings
 from whistler.trace import Trace
 
@@ -188,15 +188,16 @@ def left_over_s(row: WhistlerRow, *, settings: Settings) -> FloatArray:
         What with.
     """
     numbers = (row.l_value, row.equatorial_density_cm3, row.lightning_time_s)
-    if not np.isfinite(numbers).all() or "profile-fitted" in row.flags:  # of a model of its own
+    if not np.isfinite(numbers).all():
         return np.full(len(row.trace.time_s), np.nan)
+    default = field_line_model(settings, decimal_year=decimal_year(time_zero([row])))
     return row.trace.time_s - model_curve(
         row.trace.frequency_hz,
         l_value=row.l_value,
         density_m3=1e6 * row.equatorial_density_cm3,
         hops=row.hops,
         lightning_time_s=row.lightning_time_s,
-        model=field_line_model(settings, decimal_year=decimal_year(time_zero([row]))),
+        model=row_model(row, default=default),
     )
 
 

@@ -116,11 +116,8 @@ def _row(
     item = stroke.traces[number]
     found = numbers[item.path]
     fit = found.leaning or stroke.fit
-    sferic_s, sferic_sd_s, _ = predicted_sferic(
-        fit, item.hops, settings=settings, receiver_latitude_rad=receiver_latitude_rad
-    )
-    if stroke.sferic is not None:
-        sferic_s, sferic_sd_s = stroke.sferic.time_s, stroke.sferic.sd_s
+    exponent, fo_f2_mhz = _told(fit.model) if math.isfinite(found.l_value) else (NAN, NAN)
+    sferic_s, sferic_sd_s = _sferic(stroke, fit, item.hops, settings, receiver_latitude_rad)
     return WhistlerRow(
         recording=recording,
         group=group,
@@ -142,6 +139,8 @@ def _row(
         equatorial_density_low_cm3=found.density_low_m3 / 1e6,
         equatorial_density_high_cm3=found.density_high_m3 / 1e6,
         l_density_correlation=found.correlation,
+        density_exponent=exponent,
+        fo_f2_mhz=fo_f2_mhz,
         frequency_low_hz=float(item.trace.frequency_hz.min()),
         frequency_high_hz=float(item.trace.frequency_hz.max()),
         snr_db=sighting.snr_db,
@@ -153,6 +152,24 @@ def _row(
         trace=item.trace,
         **asdict(_derived(fit, item.path, found)),
     )
+
+
+def _sferic(
+    stroke: Stroke, fit: StrokeFit, hops: int, settings: Settings, latitude_rad: float | None
+) -> tuple[float, float]:
+    """Time and one-sigma of the causative sferic: seen, else where the fit has it."""
+    if stroke.sferic is not None:
+        return stroke.sferic.time_s, stroke.sferic.sd_s
+    time_s, sd_s, _ = predicted_sferic(
+        fit, hops, settings=settings, receiver_latitude_rad=latitude_rad
+    )
+    return time_s, sd_s
+
+
+def _told(model: FieldLineModel) -> tuple[float, float]:
+    """What a row tells of its model: density exponent and critical frequency in MHz."""
+    layer = model.layer
+    return model.density_exponent, NAN if layer is None else 1e-6 * layer.critical_frequency_hz
 
 
 @dataclass(frozen=True)

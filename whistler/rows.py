@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import numpy as np
 
+from fieldlines import FieldLineModel
 from whistler.trace import Trace
 
 TIME_DECIMALS = 6  # times in day-long recordings to a microsecond
@@ -44,6 +45,8 @@ class WhistlerRow:
     equatorial_density_low_cm3: float = NAN
     equatorial_density_high_cm3: float = NAN
     l_density_correlation: float = NAN
+    density_exponent: float = NAN
+    fo_f2_mhz: float = NAN
     dispersion_s_sqrt_hz: float = NAN
     nose_frequency_hz: float = NAN
     nose_time_s: float = NAN
@@ -105,6 +108,8 @@ COLUMNS = (
     ),
     Column("equatorial_density_high_cm3", "cm-3", "double", "its upper end"),
     Column("l_density_correlation", None, "double", "correlation of L and ln density"),
+    Column("density_exponent", None, "double", "exponent of the density of the row's model"),
+    Column("fo_f2_mhz", "MHz", "double", "critical frequency of its F2 layer"),
     Column("dispersion_s_sqrt_hz", "s Hz0.5", "double", "zero-frequency dispersion of one hop"),
     Column("nose_frequency_hz", "Hz", "double", "nose frequency of the fitted model"),
     Column("nose_time_s", "s", "double", "nose delay after the lightning, one hop"),
@@ -132,6 +137,24 @@ COLUMNS = (
     Column("flags", None, "string", "short words, separated by spaces"),
 )
 """Columns of the catalogue in order; the trace is left out of the table."""
+
+
+def row_model(row: WhistlerRow, *, default: FieldLineModel) -> FieldLineModel:
+    """Return the model that a row's numbers are given: the default one, or what was fitted of it.
+
+    Parameters
+    ----------
+    row : WhistlerRow
+        The row; where it does not tell its model, of before it did, that is the default one.
+    default : fieldlines.FieldLineModel
+        The model of the row's settings and date.
+    """
+    if not math.isfinite(row.density_exponent):
+        return default
+    layer = default.layer
+    if layer is not None and math.isfinite(row.fo_f2_mhz):
+        layer = replace(layer, critical_frequency_hz=1e6 * row.fo_f2_mhz)
+    return replace(default, density_exponent=row.density_exponent, layer=layer)
 
 
 def row_values(row: WhistlerRow) -> dict[str, Any]:

@@ -26,9 +26,10 @@ CONTRACT = (
     "lightning_time_s time hops hop_probability l_value l_value_sd l_value_profile_sd "
     "l_value_low l_value_high equatorial_density_cm3 "
     "equatorial_density_sd_cm3 equatorial_density_profile_sd_cm3 equatorial_density_low_cm3 "
-    "equatorial_density_high_cm3 l_density_correlation dispersion_s_sqrt_hz nose_frequency_hz "
-    "nose_time_s equatorial_gyrofrequency_hz tube_content_m2 tube_content_sd_m2 "
-    "tube_content_profile_sd_m2 frequency_low_hz frequency_high_hz snr_db significance fit_rms_s "
+    "equatorial_density_high_cm3 l_density_correlation density_exponent fo_f2_mhz "
+    "dispersion_s_sqrt_hz nose_frequency_hz nose_time_s equatorial_gyrofrequency_hz "
+    "tube_content_m2 tube_content_sd_m2 tube_content_profile_sd_m2 frequency_low_hz "
+    "frequency_high_hz snr_db significance fit_rms_s "
     "centre_share_sd uncertainty_status flags"
 )
 

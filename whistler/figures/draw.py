@@ -18,6 +18,7 @@ from whistler.figures.style import (
     row_label,
 )
 from whistler.fit import model_curve
+from whistler.rows import row_model
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -136,7 +137,7 @@ def draw_curve(
     ax : matplotlib.axes.Axes
         Where to draw.
     model : fieldlines.FieldLineModel
-        The model of the fit.
+        The default model of the fit.
     style : PathStyle
         Its look.
     band_hz : tuple of float
@@ -183,7 +184,7 @@ def curve_times(row: WhistlerRow, frequency_hz: FloatArray, *, model: FieldLineM
         density_m3=row.equatorial_density_cm3 * 1e6,
         hops=row.hops,
         lightning_time_s=row.lightning_time_s,
-        model=model,
+        model=row_model(row, default=model),
     )
 
 
