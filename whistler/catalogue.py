@@ -64,6 +64,10 @@ class Measured(Protocol):
     def notices(self) -> Sequence[Notice]:
         """What else was noticed."""
 
+    @property
+    def false_alarms_per_hour(self) -> float:
+        """False detections to expect."""
+
 
 @dataclass(frozen=True)
 class Entry:
@@ -95,6 +99,7 @@ def entry(measurement: Measured) -> Entry:
             "duration_s": plain(recording.duration_s, decimals=TIME_DECIMALS),
             "sample_rate_hz": recording.sample_rate_hz,
             "channels": recording.channels,
+            "false_alarms_per_hour": plain(measurement.false_alarms_per_hour),
             "notices": [str(notice) for notice in notices],
         },
         whistlers=tuple(row_values(row) for row in measurement.rows),

@@ -52,6 +52,22 @@ THIN = Pass(1, loss=0.3, width_s=0.012, windows_s=(0.06, 0.03, 0.02), borne_out=
 THICK = Pass(16, loss=0.3, width_s=0.064, windows_s=(0.15, 0.12, 0.10), borne_out=0.3)
 
 
+@dataclass(frozen=True)
+class Discovery:
+    """What was found in a block of audio.
+
+    Parameters
+    ----------
+    traces : tuple of Detection
+        Pass by pass, each at least as strong as the threshold that the reversed block sets.
+    false_alarms_per_hour : float
+        Expected at these thresholds from what the reversed block shows.
+    """
+
+    traces: tuple[Detection, ...]
+    false_alarms_per_hour: float
+
+
 class Banks:
     """The template banks of one analysis, built once for all its recordings.
 
@@ -86,8 +102,8 @@ class Banks:
 
 def find_traces(
     audio: CleanAudio, spectrogram: Spectrogram, *, banks: Banks, settings: Settings
-) -> list[Detection]:
-    """Return the traces in a block of cleaned audio, strongest first.
+) -> Discovery:
+    """Return the traces in a block of cleaned audio, and how many may be chance.
 
     Parameters
     ----------
@@ -102,11 +118,12 @@ def find_traces(
 
     Returns
     -------
-    list of Detection
-        Each at least as strong as the threshold that the reversed recording sets.
+    Discovery
+        Traces that their own sub-bands bear out.
     """
     left = replace(spectrogram, power=spectrogram.power.copy())
     found: list[Detection] = []
+    rate = 0.0
     for resolution in (THIN, THICK):
         bank = banks.bank(left.frequency_hz, resolution)
         search = CurveSearch(left, bank, smooth=resolution.smooth)
@@ -120,7 +137,9 @@ def find_traces(
             if detection.candidate.strength >= threshold and not seen_before(detection, found):
                 found.append(_rated(detection, resolution.borne_out, null))
                 _erase(left, detection, banks.model)
-    return found
+        # Above the threshold: the strongest reversed sum may set it, and is not exceeded.
+        rate += resolution.borne_out * null.rate_per_hour(float(np.nextafter(threshold, np.inf)))
+    return Discovery(tuple(found), rate)
 
 
 def _rated(detection: Detection, borne_out: float, null: Null) -> Detection:

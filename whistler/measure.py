@@ -60,7 +60,9 @@ class Measurement:
     sferics : SfericCatalogue
         All sferics seen.
     model : fieldlines.FieldLineModel
-        The model of the fits.
+        The default model of the fits.
+    false_alarms_per_hour : float
+        False detections to expect in an hour, from the recording reversed in time.
     """
 
     recording: Recording
@@ -70,6 +72,7 @@ class Measurement:
     views: tuple[Spectrogram, ...]
     sferics: SfericCatalogue
     model: FieldLineModel
+    false_alarms_per_hour: float = float("nan")
 
     # The methods below are for notebooks. What they need from modules that stand above this one
     # they ask of the package by its public names, and only when called.
@@ -147,6 +150,7 @@ def _html_cells(row: WhistlerRow) -> str:
 @dataclass(frozen=True)
 class _BlockResult:
     detections: list[Detection]
+    false_alarms_per_hour: float
     sferics: SfericCatalogue
     view: Spectrogram | None
 
@@ -197,7 +201,13 @@ def measure_recording(
         views=tuple(result.view for result in results if result.view is not None),
         sferics=sferics,
         model=model,
+        false_alarms_per_hour=_mean([result.false_alarms_per_hour for result in results]),
     )
+
+
+def _mean(values: list[float]) -> float:
+    """Mean over the blocks; an empty recording has none."""
+    return float(np.mean(values)) if values else float("nan")
 
 
 def _bank_model(recording: Recording, settings: Settings) -> FieldLineModel:
@@ -222,12 +232,12 @@ def _measure_block(
     low_s = start_s + 0.5 * OVERLAP_S if block.first_frame > 0 else -np.inf
     at_end = block.first_frame + len(block.samples) >= recording.frame_count
     high_s = np.inf if at_end else end_s - 0.5 * OVERLAP_S
+    found = find_traces(audio, view, banks=banks, settings=settings)
     detections = [
-        item
-        for item in find_traces(audio, view, banks=banks, settings=settings)
-        if low_s - SEAM_S <= item.candidate.time_s < high_s + SEAM_S
+        item for item in found.traces if low_s - SEAM_S <= item.candidate.time_s < high_s + SEAM_S
     ]
-    return _BlockResult(detections, _within(audio, low_s, high_s), view)
+    sferics = _within(audio, low_s, high_s)
+    return _BlockResult(detections, found.false_alarms_per_hour, sferics, view)
 
 
 def _once(results: list[_BlockResult]) -> list[Detection]:

@@ -18,7 +18,7 @@ from whistler.spectrogram import spectrogram
 def find(banks: Banks, settings: Settings):  # type: ignore[no-untyped-def]
     def run(audio: CleanAudio) -> list[Detection]:
         view = spectrogram(audio, band_low_hz=settings.band_low_hz)
-        return find_traces(audio, view, banks=banks, settings=settings)
+        return list(find_traces(audio, view, banks=banks, settings=settings).traces)
 
     return run
 

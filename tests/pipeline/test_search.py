@@ -259,4 +259,4 @@ def test_white_noise_has_no_whistlers(
 ) -> None:
     """Recovery: at one false alarm an hour, three minutes of noise give none (0.05 expected)."""
     audio, view = noise
-    assert find_traces(audio, view, banks=banks, settings=settings) == []
+    assert find_traces(audio, view, banks=banks, settings=settings).traces == ()

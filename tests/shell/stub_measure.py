@@ -31,6 +31,7 @@ class Measurement:
     rows: tuple[WhistlerRow, ...]
     notices: tuple[Notice, ...]
     views: tuple[Any, ...] = ()
+    false_alarms_per_hour: float = float("nan")
 
 
 def measure_recording(recording: Recording, settings: Settings, *, progress: Any = None) -> Any:

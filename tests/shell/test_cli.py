@@ -40,6 +40,7 @@ def test_json_is_one_document_and_nothing_else(whistler: Whistler, wav: Path) ->
             "duration_s": 2.0,
             "sample_rate_hz": 16_000,
             "channels": 1,
+            "false_alarms_per_hour": None,
             "notices": [],
         }
     ]

@@ -131,7 +131,7 @@ class _Run:
     def _show(self, measurement: Measurement) -> None:
         from whistler.commands.table import recording_table
 
-        self._print(recording_table(measurement.recording, measurement.rows) + "\n")
+        self._print(recording_table(measurement) + "\n")
         if self._out is None or not self._figures:
             return
         from whistler.figures import save_recording_figure

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator, Sequence
-from typing import NamedTuple
+from typing import TYPE_CHECKING, NamedTuple
 
 from whistler.clock import iso_time
 from whistler.errors import printable
-from whistler.recording import Recording
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings
+
+if TYPE_CHECKING:
+    from whistler.measure import Measurement
 
 STATUS_WORDS = {"undetermined": "undet", "at-bound": "bound", "prior-dominated": "prior"}
 LEGEND = (
@@ -52,27 +54,28 @@ _FIELDS = (
 )
 
 
-def recording_table(recording: Recording, rows: Sequence[WhistlerRow]) -> str:
+def recording_table(measurement: Measurement) -> str:
     """Return heading and table of one recording, without a legend.
 
     Parameters
     ----------
-    recording : Recording
-        For the heading.
-    rows : sequence of WhistlerRow
-        Its whistlers.
+    measurement : Measurement
+        The recording and its whistlers.
 
     Returns
     -------
     str
         Lines of at most 80 characters, except a long file name's.
     """
+    recording, rate = measurement.recording, measurement.false_alarms_per_hour
     began = iso_time(recording.start_time) or "unknown time"
     lines = [
         printable(recording.path),
         f"  {recording.duration_s:.1f} s at {recording.sample_rate_hz} Hz from {began}",
     ]
-    return "\n".join([*lines, rows_table(rows)])
+    if math.isfinite(rate):
+        lines.append(f"  false alarms to expect: {rate:.2g} an hour, by the recording reversed")
+    return "\n".join([*lines, rows_table(measurement.rows)])
 
 
 def rows_table(rows: Sequence[WhistlerRow]) -> str:
