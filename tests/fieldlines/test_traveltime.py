@@ -241,6 +241,32 @@ def test_densities_in_an_array_are_rows(default_model: FieldLineModel) -> None:
     assert result.jacobian.shape == (5, 3)
 
 
+@pytest.mark.parametrize("l_value", [2.0, 3.0, 4.5])
+def test_layer_change_is_the_derivative_of_the_time(
+    l_value: float, default_model: FieldLineModel
+) -> None:
+    """Identity: central differences of the time in ln foF2.
+
+    Steps of 1e-4: truncation 1e-8 of the change, rounding 1e-16 x 1 s / 1e-4, 1e-12 s, of changes
+    of 5 ms and more.
+    """
+    parts = {"l_value": l_value, "equatorial_density_m3": 9e8}
+    frequency_hz = np.linspace(1e3, 0.8 * maximum_frequency(l_value, model=default_model), 9)
+    layer = default_model.layer
+    assert layer is not None
+    times_s = []
+    for step in (-1e-4, 1e-4):
+        critical_hz = layer.critical_frequency_hz * np.exp(step)
+        moved = replace(default_model, layer=replace(layer, critical_frequency_hz=critical_hz))
+        times_s.append(travel_time(frequency_hz, **parts, model=moved))
+    wanted = (times_s[1] - times_s[0]) / 2e-4
+    assert wanted.min() > 0.005
+    found = travel_time_jacobian(frequency_hz, **parts, model=default_model).layer_change_s
+    np.testing.assert_allclose(found, wanted, rtol=1e-7)
+    bare = travel_time_jacobian(frequency_hz, **parts, model=replace(default_model, layer=None))
+    assert not bare.layer_change_s.any()
+
+
 def test_each_frequency_is_independent_of_the_others(default_model: FieldLineModel) -> None:
     """Identity: the time at a frequency has the same bits alone and in company."""
     parts = {"l_value": 3.1, "equatorial_density_m3": 8e8, "model": default_model}
