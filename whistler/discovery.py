@@ -12,13 +12,16 @@ from fieldlines import FieldLineModel
 from whistler.bank import Bank, build_bank
 from whistler.chance import Null
 from whistler.cleaning import CleanAudio
-from whistler.follow import Detection, follow
+from whistler.follow import DIFFUSE_S, Detection, follow
 from whistler.search import CurveSearch
 from whistler.settings import Settings
 from whistler.spectrogram import Spectrogram
 
 MOST_PER_MINUTE = 80  # candidates followed; a recording this crowded is searched no deeper
 FIRST_LOOK = 9.0  # sums followed before the null is taken: whistlers crossing it would raise it
+SAME_S = 0.012  # two readings of one thin trace are nearer than that
+BESIDE_S = 0.15  # what peeling leaves of a trace lies within it
+LEAST_OVERLAP = 3  # points
 APART_S = 1.5  # between peaks handled in one round: their ridges do not touch
 
 
@@ -127,14 +130,21 @@ def find_traces(
     for resolution in (THIN, THICK):
         bank = banks.bank(left.frequency_hz, resolution)
         search = CurveSearch(left, bank, smooth=resolution.smooth)
-        new = list(_peel_off(search, audio, spectrogram, banks.model, resolution, FIRST_LOOK))
+        known = [*found]
+        parts = (search, audio, spectrogram, banks.model, resolution)
+        new = list(_peel_off(*parts, threshold=FIRST_LOOK, known=known))
         null = search.null()
         # Half of the rate for either pass.
-        threshold = null.threshold(0.5 * settings.false_alarms_per_hour / resolution.borne_out)
+        rate_wanted = 0.5 * settings.false_alarms_per_hour
+        threshold = null.threshold(rate_wanted / resolution.borne_out)
+        # Remains of a neighbour are no chance sums, and their sub-bands may bear them out.
+        beside = null.threshold(rate_wanted)
         if threshold < FIRST_LOOK:
-            new += _peel_off(search, audio, spectrogram, banks.model, resolution, threshold)
+            new += _peel_off(*parts, threshold=threshold, known=known)
         for detection in new:
-            if detection.candidate.strength >= threshold and not seen_before(detection, found):
+            near = any(_distance_s(detection, other) < BESIDE_S for other in found)
+            needed = beside if near else threshold
+            if detection.candidate.strength >= needed and not seen_before(detection, found):
                 found.append(_rated(detection, resolution.borne_out, null))
                 _erase(left, detection, banks.model)
         # Above the threshold: the strongest reversed sum may set it, and is not exceeded.
@@ -154,9 +164,14 @@ def _peel_off(
     spectrogram: Spectrogram,
     model: FieldLineModel,
     resolution: Pass,
+    *,
     threshold: float,
+    known: list[Detection],
 ) -> Iterator[Detection]:
-    """Follow and remove the strongest sums until none is left above the threshold."""
+    """Follow and remove the strongest sums until none is left above the threshold.
+
+    What is followed joins those `known`.
+    """
     left = max(20, round(MOST_PER_MINUTE * spectrogram.power.shape[1] * spectrogram.hop_s / 60.0))
     while left > 0:
         peaks = search.peaks(threshold, apart_s=APART_S)
@@ -173,11 +188,13 @@ def _peel_off(
                 spectrogram=spectrogram,
                 model=model,
                 windows_s=resolution.windows_s,
+                known=known,
             )
-            ridges = [(candidate.curve_s, candidate.thickness_s)]
+            ridges = [(candidate.curve_s, 0.5 * candidate.thickness_s)]
             if detection is not None:
                 curve_s = detection.path.curve(model)(candidate.frequency_hz)
                 ridges.append((curve_s, detection.reading.thickness_s))
+                known.append(detection)
                 yield detection
             search.peel(
                 candidate.frequency_hz,
@@ -205,19 +222,23 @@ def seen_before(detection: Detection, found: list[Detection]) -> bool:
     bool
         True when it runs within 12 ms, and twice the thickness, of one of them.
     """
-    points = detection.reading.trace
-    for other in found:
-        seen = other.reading.trace
-        apart = np.abs(
-            points.time_s - np.interp(points.frequency_hz, seen.frequency_hz, seen.time_s)
-        )
-        overlap = (points.frequency_hz >= seen.frequency_hz[0]) & (
-            points.frequency_hz <= seen.frequency_hz[-1]
-        )
-        near_s = 0.012 + 2.0 * max(other.reading.thickness_s, detection.reading.thickness_s)
-        if overlap.sum() >= 3 and np.median(apart[overlap]) < near_s:
-            return True
-    return False
+    return any(
+        _distance_s(detection, other)
+        < SAME_S + 2.0 * max(other.reading.thickness_s, detection.reading.thickness_s)
+        for other in found
+    )
+
+
+def _distance_s(detection: Detection, other: Detection) -> float:
+    """Median distance in time of a trace's points from another trace, where that has any."""
+    points, seen = detection.reading.trace, other.reading.trace
+    overlap = (points.frequency_hz >= seen.frequency_hz[0]) & (
+        points.frequency_hz <= seen.frequency_hz[-1]
+    )
+    if overlap.sum() < LEAST_OVERLAP:
+        return float("inf")
+    apart_s = points.time_s - np.interp(points.frequency_hz, seen.frequency_hz, seen.time_s)
+    return float(np.median(np.abs(apart_s[overlap])))
 
 
 def _half_width_s(
@@ -225,7 +246,9 @@ def _half_width_s(
 ) -> NDArray[np.float64]:
     """Half the time a trace fills in each channel: its own cell, the window, its thickness."""
     slope = np.abs(np.gradient(curve_s, frequency_hz))
-    return 0.014 + 0.7 * np.sqrt(slope) + 40.0 * slope + 2.0 * thickness_s
+    if thickness_s > DIFFUSE_S:
+        return 0.014 + 0.7 * np.sqrt(slope) + 40.0 * slope + 2.0 * thickness_s
+    return 0.012 + 0.5 * np.sqrt(slope) + 25.0 * slope + 1.5 * thickness_s
 
 
 def _erase(spectrogram: Spectrogram, detection: Detection, model: FieldLineModel) -> None:

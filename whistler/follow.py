@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -18,6 +19,7 @@ from whistler.spectrogram import Spectrogram
 from whistler.trace import (
     SUB_BAND_HZ,
     Curve,
+    Straightened,
     Trace,
     TraceReading,
     coarse_thickness,
@@ -26,6 +28,8 @@ from whistler.trace import (
     straighten,
 )
 
+NEAR_S = 1.0  # between candidates that may run close to each other somewhere
+PULSE_S = 0.004  # half of what a thin trace takes up in a sub-band
 WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
 LEAST_SPAN_HZ = 1500.0
@@ -129,6 +133,7 @@ def follow(
     spectrogram: Spectrogram,
     model: FieldLineModel,
     windows_s: tuple[float, ...],
+    known: Sequence[Detection] = (),
 ) -> Detection | None:
     """Return the trace behind a candidate, or None when its sub-bands do not bear it out.
 
@@ -144,16 +149,19 @@ def follow(
         Gives the curve.
     windows_s : tuple of float
         Lags accepted, round by round.
+    known : sequence of Detection
+        Traces already followed: what lies on them is theirs.
 
     Returns
     -------
     Detection or None
         A trace spans at least 1.5 kHz, and half of its sub-bands were timed.
     """
+    near = [other for other in known if abs(other.candidate.time_s - candidate.time_s) < NEAR_S]
     for split in (FINE, COARSE):
-        found = _followed(candidate, audio, spectrogram, model, windows_s, split)
+        found = _followed(candidate, audio, spectrogram, model, windows_s, split, near)
         if found is not None:
-            reading, path = _sharpen(audio, found[0], path=found[1], model=model)
+            reading, path = _sharpen(audio, found[0], path=found[1], model=model, known=near)
             snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
             return Detection(candidate, reading, path, snr_db)
     return None
@@ -166,6 +174,7 @@ def _followed(
     model: FieldLineModel,
     windows_s: tuple[float, ...],
     split: Split,
+    known: Sequence[Detection],
 ) -> tuple[TraceReading, OneHop] | None:
     """The trace as its sub-bands show it, when they bear it out."""
     path = _start(candidate, model)
@@ -182,6 +191,7 @@ def _followed(
         )
         if view is None:
             return None
+        view = _apart_from(known, view, path.curve(model), model)
         if number > 0:
             thickness_s = coarse_thickness(view)
         reading = read_trace(
@@ -199,6 +209,24 @@ def _followed(
     if reading is None or not _borne_out(reading, split.least_points):
         return None
     return (reading, path) if _as_found(candidate, path, model) else None
+
+
+def _apart_from(
+    known: Sequence[Detection], view: Straightened, curve: Curve, model: FieldLineModel
+) -> Straightened:
+    """The view with what lies on other thin traces at the level of the noise.
+
+    The wings of a diffuse trace would look like traces of their own without its middle.
+    """
+    thin = [other for other in known if other.reading.thickness_s <= DIFFUSE_S]
+    if not thin:
+        return view
+    power = view.power.copy()
+    for other in thin:
+        lag_s = other.path.curve(model)(view.frequency_hz) - curve(view.frequency_hz)
+        width_s = PULSE_S + 1.5 * other.reading.thickness_s
+        power[np.abs(view.lag_s - lag_s[:, None]) < width_s] = 1.0
+    return replace(view, power=power)
 
 
 def _start(candidate: Candidate, model: FieldLineModel) -> OneHop:
@@ -263,7 +291,12 @@ def _borne_out(reading: TraceReading, least_points: int) -> bool:
 
 
 def _sharpen(
-    audio: CleanAudio, reading: TraceReading, *, path: OneHop, model: FieldLineModel
+    audio: CleanAudio,
+    reading: TraceReading,
+    *,
+    path: OneHop,
+    model: FieldLineModel,
+    known: Sequence[Detection],
 ) -> tuple[TraceReading, OneHop]:
     """Time wider sub-bands on the pattern they share; keep the old points if they share none."""
     low_hz, high_hz = reading.trace.frequency_hz[[0, -1]]
@@ -280,6 +313,7 @@ def _sharpen(
         )
         if view is None:
             return reading, path
+        view = _apart_from(known, view, curve, model)
         arrival_s = curve(view.frequency_hz)
         aligned = align(
             view,
