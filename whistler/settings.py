@@ -31,7 +31,7 @@ class Settings:
     density_exponent : float
         alpha of the density along the line, ``n ~ r**-alpha``, 0 to 6.
     density_exponent_sd : float
-        One-sigma of alpha, counted in the profile sigma.
+        One-sigma of alpha: how firmly fits hold it, counted in the profile sigma.
     fo_f2_sd_mhz, hm_f2_sd_km : float
         One-sigma of the F2 layer's critical frequency and peak height, where the station has none.
     stroke_distance_sd_m : float

@@ -4,7 +4,7 @@
 
 Ridge picks (`ridge_bound.py`) of one trace of L 2.2 to 4.5 and 10 to 20 dB, with its sferic, drawn
 from a model with another density exponent, foF2 and hmF2, the stroke up to 800 km (one-sigma) from
-the foot; fitted with the default model; no audio. Drawn from the declared distributions (exponent
+the foot; measured as any stroke, the default model held or fitted; no audio. Drawn from the declared distributions (exponent
 1 +- 0.65, foF2 5 +- 1.5 MHz, hmF2 300 +- 40 km), and evenly from exponents 0 to 3 and foF2 3 to
 9 MHz, which is wider than declared.
 """
@@ -79,7 +79,7 @@ def evenly(generator: np.random.Generator) -> FieldLineModel:
 def stroke(
     draw: Callable[[np.random.Generator], FieldLineModel], generator: np.random.Generator
 ) -> Truth:
-    """Draw a stroke and fit it with the default model."""
+    """Draw a stroke and make its row."""
     model = draw(generator)
     l_value = generator.uniform(2.2, 4.5)
     density_m3 = float(saturated_density(l_value)) * 10.0 ** generator.normal(0.0, 0.15)

@@ -33,6 +33,11 @@ def _number(value: float, form: str) -> str:
     return format(value, form) if math.isfinite(value) else "-"
 
 
+def _l_sigma(value: float) -> str:
+    """Return the profile sigma of L with two decimals, three where it is small."""
+    return _number(value, ".2f" if value >= 0.1 else ".3f")
+
+
 def _density(value: float) -> str:
     """Return a density or its sigma with about two significant digits, never with an exponent."""
     return _number(value, ".0f" if value >= 10 else ".1f" if value >= 1 else ".2f")
@@ -44,7 +49,7 @@ _FIELDS = (
     _Field("hop", 3, lambda row: str(row.hops)),
     _Field("L", 6, lambda row: _number(row.l_value, ".3f")),
     _Field("±", 6, lambda row: _number(row.l_value_sd, ".3f" if row.l_value_sd > 1e-3 else ".4f")),
-    _Field("(±)", 6, lambda row: f"({_number(row.l_value_profile_sd, '.2f')})"),
+    _Field("(±)", 7, lambda row: f"({_l_sigma(row.l_value_profile_sd)})"),
     _Field("n/cm3", 7, lambda row: _density(row.equatorial_density_cm3)),
     _Field("±", 5, lambda row: _density(row.equatorial_density_sd_cm3)),
     _Field("(±)", 7, lambda row: f"({_density(row.equatorial_density_profile_sd_cm3)})"),
