@@ -22,7 +22,7 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
-LEAST_SD_S = 4e-5
+LEAST_SD_S = 1e-4  # a stroke's own pulse is no shorter
 CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
 LAG_SD = 0.215  # of strong sub-bands, in units of one over the band width; from synthetic ducts
 NOISE_LAG_SD = 1.5  # in the same units, at a peak as strong as the noise; falls with its root
@@ -57,7 +57,7 @@ class Alignment:
         unlike = np.sqrt(np.maximum(1.0 - self.correlation**2, 0.01))
         by_shape = LAG_SD * unlike / np.maximum(self.correlation, 0.1)
         by_noise = NOISE_LAG_SD / np.sqrt(self.strength)
-        return np.asarray(np.hypot(by_shape, by_noise) / band_width_hz + LEAST_SD_S)
+        return np.sqrt((by_shape**2 + by_noise**2) / band_width_hz**2 + LEAST_SD_S**2)
 
 
 def align(

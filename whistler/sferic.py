@@ -93,7 +93,7 @@ def _local_sigma(strength: NDArray[np.float32], sample_rate_hz: float) -> NDArra
     return np.repeat(sigma, size)[: len(strength)].astype(np.float32)
 
 
-CAUSE_UNSEEN = 0.2  # prior share of causative sferics too weak to be catalogued (our own estimate)
+CAUSE_UNSEEN = 0.25  # prior share of causative sferics too weak to be catalogued (our own estimate)
 CAUSE_STRONGER = 0.7  # in ln amplitude: strokes that make whistlers are the strong ones
 READING_SD_S = 0.0005  # of a front on the whitened audio
 
