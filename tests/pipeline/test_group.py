@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from makers import model_trace
@@ -93,6 +95,20 @@ def test_paths_of_one_stroke_join_without_a_sferic(model, group) -> None:
     assert stroke.sferic is None
     assert stroke.sferic_probability == 0.0
     assert stroke.fit.lightning_time_s == pytest.approx(30.0, abs=2e-3)
+
+
+def test_paths_join_where_the_profile_is_another(model: FieldLineModel, group) -> None:
+    """Recovery: traces of exponent 2 and foF2 7 MHz, for which the default model's times of the two
+    paths differ by tens of ms, are of one stroke, and its time is within 15 ms (sigma some 7)."""
+    layer = model.layer
+    assert layer is not None
+    other = replace(model, density_exponent=2.0, layer=replace(layer, critical_frequency_hz=7e6))
+    items = [found(other, l_value, 1, time_s=30.0) for l_value in (3.3, 4.1)]
+    (stroke,) = group(items, QUIET)
+    assert stroke.hops == (1, 1)
+    assert stroke.fit.lightning_time_s == pytest.approx(30.0, abs=0.015)
+    exponent = stroke.fit.model.density_exponent
+    assert exponent == pytest.approx(2.0, abs=0.35)
 
 
 @pytest.mark.parametrize("order", [(1, 3, 5), (1, 3), (2, 4)])
