@@ -122,6 +122,20 @@ def test_curve_is_the_model_solid_where_traced_dashed_beyond(
     assert below.is_dashed() and above.is_dashed()
 
 
+def test_curve_of_a_fitted_profile_is_that_of_its_own_model(
+    ax: Axes, make_row: MakeRow, model: FieldLineModel
+) -> None:
+    """Identity: exponent and foF2 of the row, from fieldlines directly; the default one is off."""
+    assert model.layer is not None
+    layer = replace(model.layer, critical_frequency_hz=6e6)
+    own = replace(model, density_exponent=2.0, layer=layer)
+    row = make_row(density_exponent=2.0, fo_f2_mhz=6.0)
+    solid, *_ = figures.draw_curve(row, ax, model=model, style=STYLE, band_hz=BAND_HZ)
+    drawn_s = np.asarray(solid.get_xdata())
+    assert drawn_s == pytest.approx(expected_times(row, solid, own), abs=SAME_S)
+    assert np.abs(drawn_s - expected_times(row, solid, model)).min() > 0.01
+
+
 def test_curve_ends_at_half_the_equatorial_gyrofrequency(
     ax: Axes, make_row: MakeRow, model: FieldLineModel
 ) -> None:
@@ -245,6 +259,7 @@ def test_styles_are_safe_for_the_colour_blind_and_for_grey_print() -> None:
     ("changes", "label"),
     [
         ({"hops": 3, "l_value_sd": 0.0004}, "3 hops: L 2.8000 ± 0.0004 (± 0.04), n 1000 ± 12"),
+        ({"l_value_profile_sd": 0.0042}, "1 hop: L 2.800 ± 0.004 (± 0.004), n 1000 ± 12"),
         ({"equatorial_density_sd_cm3": 0.31}, "1 hop: L 2.800 ± 0.004 (± 0.04), n 1000.0 ± 0.3"),
         ({"uncertainty_status": "prior-dominated"}, "1 hop: L 2.80, n 1000 cm⁻³, led by the prior"),
         ({"uncertainty_status": "undetermined"}, "1 hop: L 2.80, n 1000 cm⁻³, undetermined"),

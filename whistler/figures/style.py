@@ -80,17 +80,25 @@ def row_label(row: WhistlerRow) -> str:
     path = _with_sd(row.l_value, row.l_value_sd, least_decimals=3)
     density = _with_sd(row.equatorial_density_cm3, row.equatorial_density_sd_cm3)
     return (
-        f"{hops}: L {path} (± {row.l_value_profile_sd:.2f}), "
+        f"{hops}: L {path} (± {_sd_text(row.l_value_profile_sd, least_decimals=2)}), "
         f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³{prior}"
     )
 
 
 def _with_sd(value: float, sd: float, *, least_decimals: int = 0) -> str:
     """Value and one-sigma to the decimals that show the first digit of the sigma."""
-    decimals = least_decimals
-    if math.isfinite(sd) and sd > 0.0:
-        decimals = max(least_decimals, -math.floor(math.log10(sd)))
+    decimals = _decimals(sd, least_decimals)
     return f"{value:.{decimals}f} ± {sd:.{decimals}f}"
+
+
+def _sd_text(sd: float, *, least_decimals: int) -> str:
+    return f"{sd:.{_decimals(sd, least_decimals)}f}"
+
+
+def _decimals(sd: float, least: int) -> int:
+    """Decimals that show the first digit of a sigma, and at least so many."""
+    known = math.isfinite(sd) and sd > 0.0
+    return max(least, -math.floor(math.log10(sd))) if known else least
 
 
 def stroke_heading(row: WhistlerRow) -> str:
