@@ -260,6 +260,11 @@ def test_styles_are_safe_for_the_colour_blind_and_for_grey_print() -> None:
     [
         ({"hops": 3, "l_value_sd": 0.0004}, "3 hops: L 2.8000 ± 0.0004 (± 0.04), n 1000 ± 12"),
         ({"l_value_profile_sd": 0.0042}, "1 hop: L 2.800 ± 0.004 (± 0.004), n 1000 ± 12"),
+        (
+            {"flags": ("density-prior", "echo", "profile-fitted")},
+            "1 hop: L 2.800 ± 0.004 (± 0.04), n 1000 ± 12 (± 230) cm⁻³, density prior, "
+            "profile fitted",
+        ),
         ({"equatorial_density_sd_cm3": 0.31}, "1 hop: L 2.800 ± 0.004 (± 0.04), n 1000.0 ± 0.3"),
         ({"uncertainty_status": "prior-dominated"}, "1 hop: L 2.80, n 1000 cm⁻³, led by the prior"),
         ({"uncertainty_status": "undetermined"}, "1 hop: L 2.80, n 1000 cm⁻³, undetermined"),

@@ -21,6 +21,7 @@ STATUS_WORDS = {
     "at-bound": "not determined (fit at a bound)",
     "prior-dominated": "led by the prior",
 }
+TOLD_FLAGS = ("density-prior", "profile-fitted")  # what the numbers rest on beside the default
 # Okabe and Ito's colours without the yellow, which white paper swallows, in an order that changes
 # lightness from each to the next. Cycles of 7 and 8 have no common factor, so 56 paths differ.
 _COLOURS = ("#0072B2", "#E69F00", "#D55E00", "#56B4E9", "#009E73", "#CC79A7", "#000000")
@@ -76,12 +77,12 @@ def row_label(row: WhistlerRow) -> str:
         return f"{hops}: L and n {status}"
     if row.uncertainty_status != "ok":
         return f"{hops}: L {row.l_value:.2f}, n {row.equatorial_density_cm3:.0f} cm⁻³, {status}"
-    prior = ", density prior" if "density-prior" in row.flags else ""
+    told = [flag.replace("-", " ") for flag in TOLD_FLAGS if flag in row.flags]
     path = _with_sd(row.l_value, row.l_value_sd, least_decimals=3)
     density = _with_sd(row.equatorial_density_cm3, row.equatorial_density_sd_cm3)
     return (
         f"{hops}: L {path} (± {_sd_text(row.l_value_profile_sd, least_decimals=2)}), "
-        f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) cm⁻³{prior}"
+        f"n {density} (± {row.equatorial_density_profile_sd_cm3:.0f}) " + ", ".join(["cm⁻³", *told])
     )
 
 
