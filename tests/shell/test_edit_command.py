@@ -111,11 +111,11 @@ def test_edits_are_made_in_order_and_told(whistler: Whistler, results: Path) -> 
     ]
     record = json.loads((results.parent / "edited/run.json").read_text())
     assert record["settings"]["options"]["edits"] == [
-        f"drop,{frequency_hz[0]:g},,,2",
+        f"drop,{frequency_hz[0]:.12g},,,2",
         "accept,,,,1",
         f"drop,{frequency_hz[2]:.0f},,,2",
-        f"move,{frequency_hz[3]:g},{time_s[3] + 0.001:.12g},0.002,2",
-        f"add,{frequency_hz[0]:g},{time_s[0]},{DEFAULT_SD_S},2",
+        f"move,{frequency_hz[3]:.12g},{time_s[3] + 0.001:.12g},0.002,2",
+        f"add,{frequency_hz[0]:.12g},{time_s[0]},{DEFAULT_SD_S},2",
     ]
     assert record["inputs"][0]["path"] == "results/catalogue.jsonl"
     assert [row["recording"] for row in table(results.parent / "edited/catalogue.csv")] == [
