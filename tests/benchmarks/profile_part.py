@@ -4,9 +4,9 @@
 
 Ridge picks (`ridge_bound.py`) of one trace of L 2.2 to 4.5 and 10 to 20 dB, with its sferic, drawn
 from a model with another density exponent, foF2 and hmF2, the stroke up to 800 km (one-sigma) from
-the foot; measured as any stroke, the default model held or fitted; no audio. Drawn from the declared distributions (exponent
-1 +- 0.65, foF2 5 +- 1.5 MHz, hmF2 300 +- 40 km), and evenly from exponents 0 to 3 and foF2 3 to
-9 MHz, which is wider than declared.
+the foot; measured as any stroke, the default model held or fitted; no audio. Drawn from the
+declared distributions (exponent 1 +- 0.65, foF2 5 +- 1.5 MHz, hmF2 300 +- 40 km), and evenly from
+exponents 0 to 3 and foF2 3 to 9 MHz, which is wider than declared.
 """
 
 from __future__ import annotations
