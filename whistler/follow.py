@@ -29,6 +29,8 @@ from whistler.trace import (
 )
 
 NEAR_S = 1.0  # between candidates that may run close to each other somewhere
+NARROW_S = 0.025  # lags that leave a neighbour out
+THIN_S = 0.0015
 PULSE_S = 0.004  # half of what a thin trace takes up in a sub-band
 WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
@@ -158,13 +160,19 @@ def follow(
         A trace spans at least 1.5 kHz, and half of its sub-bands were timed.
     """
     near = [other for other in known if abs(other.candidate.time_s - candidate.time_s) < NEAR_S]
-    for split in (FINE, COARSE):
-        found = _followed(candidate, audio, spectrogram, model, windows_s, split, near)
-        if found is not None:
-            reading, path = _sharpen(audio, found[0], path=found[1], model=model, known=near)
-            snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
-            return Detection(candidate, reading, path, snr_db)
-    return None
+    narrow_s = tuple(min(window_s, NARROW_S) for window_s in windows_s)
+    found = _followed(candidate, audio, spectrogram, model, narrow_s, FINE, near)
+    if found is None or found[0].thickness_s > THIN_S:
+        # No thin pulses within a window that leaves neighbours out: a diffuse trace, or a weak one.
+        for split in (FINE, COARSE):
+            found = _followed(candidate, audio, spectrogram, model, windows_s, split, near)
+            if found is not None:
+                break
+    if found is None:
+        return None
+    reading, path = _sharpen(audio, found[0], path=found[1], model=model, known=near)
+    snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
+    return Detection(candidate, reading, path, snr_db)
 
 
 def _followed(
