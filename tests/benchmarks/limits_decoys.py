@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -22,6 +23,7 @@ from whistler.synthesis.scene import Scene
 AFTER = 2000  # seeds after the campaign's first
 THUNDER_EVERY = 3  # every third scene has a clipped thunderstorm
 SUFFIXES = (".flac", ".wav", ".ogg", ".oga", ".mp3", ".aiff", ".w64")
+NOT_MEASURED = "Real recordings without whistlers: not measured (no `--recordings`)."
 LEAST_DB = 1.0  # parts of a scene that add less than this along a row did not make it
 
 
@@ -45,6 +47,7 @@ def decoys(options: Options) -> Part:
         *contents([job.scene for job in jobs]),
         hourly_figure("false rows", len(summary.extra), summary.minutes, high=1.0),
     ]
+    notes = () if options.recordings is not None else (NOT_MEASURED,)
     oddities = [
         f"{describe_extra(row)}; over the noise along it: {causes(job.scene, row)}"
         for job, one in zip(jobs, scored, strict=True)
@@ -54,7 +57,7 @@ def decoys(options: Options) -> Part:
         more, lines = real(options.recordings, options)
         figures += more
         oddities += lines
-    return Part("Decoys", tuple(figures), oddities=tuple(oddities))
+    return Part("Decoys", tuple(figures), notes=notes, oddities=tuple(oddities))
 
 
 def contents(scenes: list[Scene]) -> list[Figure]:
@@ -141,10 +144,11 @@ def real(folder: Path, options: Options) -> tuple[list[Figure], list[str]]:
     heard = shared_out(measure_file, paths, options, name="real recordings")
     minutes = sum(one.minutes for one in heard)
     rows = [row for one in heard for row in one.rows]
+    usable = sum(not one.trouble for one in heard)
     figures = [
-        Figure("real recordings without whistlers", sum(not one.trouble for one in heard), unit=""),
+        Figure("real recordings without whistlers", usable, low=1, unit=""),
         Figure("audio in them", minutes, unit="min"),
-        Figure("rows in them", len(rows), high=0, unit=""),
+        Figure("rows in them", len(rows) if usable else math.nan, high=0, unit=""),
     ]
     lines = [f"{one.name}: {one.trouble}" for one in heard if one.trouble]
     return figures, [*lines, *map(describe_extra, rows)]

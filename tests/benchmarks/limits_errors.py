@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from limits_run import Job, Options, Part, jobs_until, measure_all
-from limits_stats import bins, resampled, share_figure
+from limits_stats import bins, least_hourly_figure, resampled, share_figure
 from promises import Figure, Grid
 from ridge_bound import RidgeBound, ridge_bound
 from scoring import (
@@ -43,6 +43,7 @@ TEN_DB = Campaign(
 )
 L_EDGES = (2.2, 2.6, 3.2, 3.8, 4.5)
 NORMAL = 1.4826  # standard deviation over median |x| of a normal distribution
+CONSISTENT = (0.8, 1.25)  # robust rms of error over stated sigma
 FAR_PULL = 5.0
 SIGMAS_NOTE = (
     "The bound is for a mean of 10 dB over matched cells; the strength set is a median of 10 dB "
@@ -129,12 +130,16 @@ def sigmas(options: Options) -> Part:
         ),
     ]
     for name in ("L", "density"):
-        figures += ratio_figures(found, name)
+        figures += [*ratio_figures(found, name), consistency_figure(found, name)]
     figures += interval_figures(summary)
     figures += coverage_figures(summary.pairs, profile=False, one=(63, 73), two=(92, 97))
     for title, seen in (("sferic named", True), ("no sferic named", False)):
         some = tuple(p for p in summary.pairs if p.row is not None and p.row.sferic_seen == seen)
         figures += coverage_figures(some, profile=False, title=f", {title}")
+    extra = len(summary.extra)
+    figures.append(
+        least_hourly_figure("rows without a true trace", extra, summary.minutes, high=1.0)
+    )
     oddities = [*far_off(summary.pairs), *map(describe_extra, summary.extra)]
     return Part(
         "Statistical sigmas at 10 dB (thin traces, one hop, one path)",
@@ -162,6 +167,16 @@ def ratio_figures(found: list[Bounded], name: str) -> Iterator[Figure]:
         if inside.any():
             where = f"sigma of {name} over bound at L {low:g} to {high:g}, median"
             yield Figure(where, quantile(stated[inside], 0.5), high=1.5, unit="")
+
+
+def consistency_figure(found: list[Bounded], name: str) -> Figure:
+    """Actual errors over stated sigmas, where these are stated: 1 when both agree."""
+    stated = [one.relative[name] for one in found if one.row.uncertainty_status == "ok"]
+    title = f"actual errors consistent with sigma of {name}: robust rms of error over sigma"
+    if not stated:
+        return Figure(title, math.nan, *CONSISTENT, unit="")
+    sigma, error, _ = np.array(stated).T
+    return Figure(title, robust_rms(error / sigma), *CONSISTENT, unit="")
 
 
 def ratio_grid(found: list[Bounded]) -> Grid:

@@ -12,9 +12,15 @@ from pathlib import Path
 
 import numpy as np
 from limits_run import Job, Options, Part, jobs_until, shared_out
-from limits_stats import bins, exact_interval, share_figure
+from limits_stats import (
+    bins,
+    calibration_figure,
+    exact_interval,
+    least_hourly_figure,
+    share_figure,
+)
 from promises import Figure, Grid
-from scoring import SFERIC_S, Pair, Scored, campaign_scene, describe_pair, heard, score
+from scoring import SFERIC_S, Pair, Scored, Summary, campaign_scene, describe_pair, heard, score
 
 from whistler.rows import WhistlerRow
 from whistler.synthesis.draw import Campaign
@@ -31,6 +37,7 @@ CROWDED = Campaign(
 )
 NEAR_S = 5.0  # strokes farther apart than this are not in danger of being joined
 SURE = 0.9
+MOST_POINTS = 10.0  # between the mean stated probability and the share right
 PROBABILITY_EDGES = (0.0, 0.3, 0.5, 0.7, 0.8, 0.9, 0.95, 0.99, 1.0)
 CALIBRATION_NOTE = (
     "Below 0.9 a row names no sferic; there the one catalogued nearest the predicted time stands "
@@ -97,21 +104,29 @@ def groups(options: Options) -> Part:
     pairs = [pair for one in recordings for pair in one.pairs]
     found = [pair for pair in pairs if pair.row is not None]
     together, apart = joined([one.pairs for one in recordings])
-    hops_right = [pair.row.hops == pair.truth.hops for pair in found]
+    stated, right = hop_probabilities(found)
+    extra = sum(len(one.extra) for one in recordings)
+    minutes = Summary.of(recordings).minutes
     figures = [
         Figure("true traces", len(pairs), unit=""),
         share_figure("found", [pair.row is not None for pair in pairs]),
         share_figure("pairs of rows of one stroke that are joined", together, low=97),
         share_figure("pairs of rows of different strokes wrongly joined", apart, high=3),
-        share_figure("hop order right", hops_right, low=97),
-        Figure("rows without a true trace", sum(len(one.extra) for one in recordings), unit=""),
+        share_figure("hop order right", right, low=97),
+        calibration_figure(
+            "probability of the hop order", PROBABILITY_EDGES, stated, right, high=MOST_POINTS
+        ),
+        least_hourly_figure("rows without a true trace", extra, minutes, high=1.0),
     ]
     oddities = [
         describe_pair(pair)
         for pair in pairs
         if pair.row is None or pair.row.hops != pair.truth.hops
     ]
-    grids = (hop_grid(found, recordings), hop_calibration(found))
+    grids = (
+        hop_grid(found, recordings),
+        calibration("Probability of the hop order", stated, right),
+    )
     title = "Groups and hop order (10-20 dB, several paths and hops)"
     return Part(title, tuple(figures), grids, notes=(GROUPS_NOTE,), oddities=tuple(oddities))
 
@@ -159,11 +174,11 @@ def hop_grid(found: list[Pair], recordings: list[Scored]) -> Grid:
     return Grid("By what the stroke sent", head, tuple(rows))
 
 
-def hop_calibration(found: list[Pair]) -> Grid:
-    """Stated probability of the hop order against the share right, traces."""
+def hop_probabilities(found: list[Pair]) -> tuple[np.ndarray, np.ndarray]:
+    """Stated probability of the hop order, and whether it is right, of every trace."""
     stated = np.array([getattr(pair.row, "hop_probability", math.nan) for pair in found])
     right = np.array([pair.row is not None and pair.row.hops == pair.truth.hops for pair in found])
-    return calibration("Probability of the hop order", stated, right)
+    return stated, right
 
 
 def calibration(title: str, stated: np.ndarray, right: np.ndarray) -> Grid:
@@ -217,6 +232,8 @@ def sferics(options: Options) -> Part:
     named = [one for one in listed if one.row.sferic_seen]
     sure = [one for one in named if getattr(one.row, "sferic_probability", math.nan) > SURE]
     audible = [one for one in listed if one.truth.sferic_seen]
+    stated = np.array([getattr(one.row, "sferic_probability", math.nan) for one in listed])
+    right = np.array(right_of(listed))
     figures = [
         Figure("strokes", len(listed), unit=""),
         share_figure("named sferics right where stated above 0.9", right_of(sure), low=90),
@@ -226,9 +243,11 @@ def sferics(options: Options) -> Part:
             "strokes without audible sferic that were given one",
             [one.row.sferic_seen for one in listed if not one.truth.sferic_seen],
         ),
+        calibration_figure(
+            "probability of the sferic", PROBABILITY_EDGES, stated, right, high=MOST_POINTS
+        ),
     ]
-    stated = np.array([getattr(one.row, "sferic_probability", math.nan) for one in listed])
-    grid = calibration("Probability of the likeliest sferic", stated, np.array(right_of(listed)))
+    grid = calibration("Probability of the likeliest sferic", stated, right)
     oddities = [
         f"seed {one.seed} at {one.truth.lightning_time_s:.2f} s: L {one.truth.l_value:.2f} hops "
         f"{one.truth.hops} (measured {one.row.hops}), sferic "

@@ -13,6 +13,7 @@ from scipy.stats import beta, chi2
 
 CONFIDENCE = 0.95
 RESAMPLES = 400
+LEAST_CASES = 20  # of a bin of stated probabilities that is judged
 STEPS = 60  # Newton steps; a dozen are enough where the curve is determined
 # Two made-up injections of half a weight, missed far below and found far above all real ones, give
 # samples without any miss a finite curve and move no other noticeably.
@@ -114,6 +115,40 @@ def hourly_figure(name: str, count: int, minutes: float, *, high: float = math.i
         unit="per h",
         interval=(low / hours, top / hours),
     )
+
+
+def least_hourly_figure(name: str, count: int, minutes: float, *, high: float) -> Figure:
+    """The lower 95 % limit of events per hour, for parts of too few minutes to show a low rate.
+
+    Minutes of audio cannot show a rate of one per hour; what they can show is that it is exceeded,
+    and only then is the promise missed.
+    """
+    least = 0.5 * float(chi2.ppf(1.0 - CONFIDENCE, 2 * count)) if count else 0.0
+    return Figure(
+        f"{name}, lower 95 % limit ({count} in {minutes:.0f} min)",
+        60.0 * least / minutes,
+        high=high,
+        unit="per h",
+    )
+
+
+def calibration_figure(
+    name: str, edges: Sequence[float], stated: np.ndarray, right: np.ndarray, *, high: float
+) -> Figure:
+    """Largest difference, in points, of the mean stated probability and the share right in a bin.
+
+    Bins of fewer than `LEAST_CASES` are left out. A bin whose mean stated lies within the exact
+    interval of its share counts as no difference: chance alone makes ten points of twenty cases.
+    """
+    differences = []
+    for _, _, inside in bins(edges, stated):
+        count, hits = int(inside.sum()), int(right[inside].sum())
+        if count >= LEAST_CASES:
+            mean, ends = float(stated[inside].mean()), exact_interval(hits, count)
+            outside = not ends[0] <= mean <= ends[1]
+            differences.append(100.0 * abs(mean - hits / count) if outside else 0.0)
+    title = f"{name}: largest difference of stated and right ({len(differences)} bins)"
+    return Figure(title, max(differences, default=math.nan), high=high, unit="points")
 
 
 def bins(edges: Sequence[float], values: np.ndarray) -> list[tuple[float, float, np.ndarray]]:
