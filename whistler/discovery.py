@@ -145,10 +145,10 @@ def find_traces(
             near = any(_distance_s(detection, other) < BESIDE_S for other in found)
             needed = beside if near else threshold
             if detection.candidate.strength >= needed and not seen_before(detection, found):
-                found.append(_rated(detection, resolution.borne_out, null))
+                found.append(_rated(detection, 1.0 if near else resolution.borne_out, null))
                 _erase(left, detection, banks.model)
-        # Above the threshold: the strongest reversed sum may set it, and is not exceeded.
-        rate += resolution.borne_out * null.rate_per_hour(float(np.nextafter(threshold, np.inf)))
+        # Where the strongest reversed sum sets the threshold, no less than one in the block.
+        rate += resolution.borne_out * null.rate_per_hour(threshold)
     return Discovery(tuple(found), rate)
 
 

@@ -204,15 +204,16 @@ def _summary(
     freedom = max(len(residual) - len(x), 1)
     chi_square = float(residual @ residual)
     scale = max(1.0, chi_square / freedom) * (1.0 + SMALL_SAMPLE / freedom)
-    noise = _noise_share(problem, len(residual), points)
-    # Declared spreads are no measurements: a misfit does not widen them.
-    jacobian = jacobian / np.sqrt(1.0 + (scale - 1.0) * noise)[:, None]
+    measured, noise = _shares(problem, len(residual), points)
+    # A misfit widens what was measured, not the declared spreads. The fit weighed both as stated:
+    # what noise does to it; what is known in the end weighs them as they turned out.
     wanted = [*range(problem.clock + 1), *range(problem.open, problem.size)]
     unit = np.ones(problem.size)
     unit[problem.clock] = TIME_UNIT_S
-    unit = np.outer(unit, unit)[np.ix_(wanted, wanted)]
-    total = np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True)
-    from_noise = total @ (jacobian.T * noise) @ jacobian @ total
+    gain = ((_inverse(jacobian) @ jacobian.T) * unit[:, None])[wanted]
+    from_noise = (gain * (noise + (scale - 1.0) * measured)) @ gain.T
+    widened = jacobian / np.sqrt(1.0 + (scale - 1.0) * measured)[:, None]
+    total = (_inverse(widened) * np.outer(unit, unit))[np.ix_(wanted, wanted)]
     own = problem.clock + 1
     ties = np.abs(residual[points + opened :])
     near = np.minimum(x - low, high - x)[: problem.clock].reshape(-1, 2) < 1e-3
@@ -220,7 +221,7 @@ def _summary(
         log_l=x[0 : problem.clock : 2],
         log_density=x[1 : problem.clock : 2],
         lightning_time_s=problem.epoch_s + float(x[problem.clock]) * TIME_UNIT_S,
-        covariance=(from_noise[np.ix_(wanted, wanted)] * unit)[:own, :own],
+        covariance=from_noise[:own, :own],
         rms_s=problem.rms_s(x),
         chi_square=chi_square,
         freedom=freedom,
@@ -230,23 +231,30 @@ def _summary(
         used=problem.used(),
         model=problem.model_at(x),
         open_sigmas=x[problem.open :],
-        total_covariance=total[np.ix_(wanted, wanted)] * unit,
+        total_covariance=total,
     )
 
 
-def _noise_share(problem: StrokeProblem, count: int, points: int) -> FloatArray:
-    """How much of each residual's spread is noise; the rest is a declared spread.
+def _inverse(jacobian: FloatArray) -> FloatArray:
+    return np.asarray(np.linalg.pinv(jacobian.T @ jacobian, rcond=1e-14, hermitian=True))
 
-    The default is taken to be true by the statistical covariance: what pulls towards it, the spread
-    of the model and of the stroke's place, adds nothing to that.
+
+def _shares(problem: StrokeProblem, count: int, points: int) -> tuple[FloatArray, FloatArray]:
+    """How much of each residual's variance is measured, and how much counts as statistical.
+
+    What pulls towards the default model and the stroke's place is neither: the statistical
+    covariance takes them to be true. A density prior and a given L are statistical, not measured.
     """
-    share = np.ones(count)
+    measured, ties = np.ones(count), problem.ties
     first_tie = points + problem.size - problem.open
-    share[points:first_tie] = 0.0
-    sferic = problem.ties.sferic
-    if sferic is not None:
-        share[first_tie] = sferic.sd_s**2 / (sferic.sd_s**2 + sferic.place_sd_s**2)
-    return share
+    measured[points:first_tie] = 0.0
+    declared = problem.paths * ((ties.l_value is not None) + (ties.density_prior_dex is not None))
+    if ties.sferic is not None:
+        reading = ties.sferic.sd_s**2
+        measured[first_tie] = reading / (reading + ties.sferic.place_sd_s**2)
+    noise = measured.copy()
+    measured[count - declared :] = 0.0
+    return measured, noise
 
 
 def model_curve(

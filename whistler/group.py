@@ -258,9 +258,12 @@ def _fit_group(
         return traces, weigh(fit, orders[members[0]], around=around)
 
     chosen = {k: hops[k] for k in members}
-    if len(set(chosen.values())) > 1 or any(set(pair) <= set(members) for pair in partners):
+    if len(set(chosen.values())) > 1:
+        # Among echoes the ratio of the delays has told the orders; others only their own evidence.
         traces, reading = joint(chosen)
-        probability = 1.0  # an echo has told the orders: the ratio of the delays has spoken
+        echoes = {k for pair in partners for k in pair}
+        alone = [_own_probability(readings[k], hops[k]) for k in members if k not in echoes]
+        probability = min(alone, default=1.0)
     else:
         tried = {h: joint(dict.fromkeys(members, h)) for h in _thinkable(members, readings)}
         order, probability = _likeliest_order({h: item[1].score for h, item in tried.items()})
@@ -298,3 +301,9 @@ def _thinkable(members: list[int], readings: list[dict[int, Reading]]) -> list[i
 def _likeliest_order(scores: dict[int, float]) -> tuple[int, float]:
     best = max(scores, key=lambda hops: scores[hops])
     return best, 1.0 / sum(float(np.exp(score - scores[best])) for score in scores.values())
+
+
+def _own_probability(readings: dict[int, Reading], hops: int) -> float:
+    """Probability of one trace's order by what it says alone."""
+    best = readings[hops].score
+    return 1.0 / sum(float(np.exp(min(item.score - best, 50.0))) for item in readings.values())

@@ -79,16 +79,27 @@ def path_intervals(
     Returns
     -------
     PathIntervals
-        From the covariance where the misfit rises as the square of the distance, else from the rise
-        itself, counted in the same units as the covariance.
+        From the covariance where the misfit rises as the square of the distance, and where the
+        model was fitted too; else from the rise itself, in the same units as the covariance.
     """
-    profile = _Profile(fit, model, ties)
     unknowns = (2 * path, 2 * path + 1)
+    if fit.open_sigmas.size:  # the model bends with L and density: the ridge is nearly straight
+        best = (fit.log_l[path], fit.log_density[path])
+        plain = [
+            _plain(float(x), float(np.sqrt(fit.covariance[k, k])))
+            for x, k in zip(best, unknowns, strict=True)
+        ]
+        return PathIntervals(plain[0], plain[1], curved=False)
+    profile = _Profile(fit, model, ties)
     sd = {k: float(np.sqrt(fit.covariance[k, k])) for k in unknowns}
     curved = any(profile.departs(k, side * sd[k]) for k in unknowns for side in (-1.0, 1.0))
     make = profile.interval if curved else profile.plain_interval
     log_l, log_density = (make(k, sd[k]) for k in unknowns)
     return PathIntervals(log_l, log_density, curved)
+
+
+def _plain(best: float, sd: float) -> Interval:
+    return Interval(sd, best - NINETY_FIVE * sd, best + NINETY_FIVE * sd)
 
 
 class _Profile:
@@ -124,8 +135,7 @@ class _Profile:
 
     def plain_interval(self, unknown: int, sd: float) -> Interval:
         """Sigma and 95 % interval that the covariance gives."""
-        best, reach = float(self.best[unknown]), NINETY_FIVE * sd
-        return Interval(sd, best - reach, best + reach)
+        return _plain(float(self.best[unknown]), sd)
 
     def interval(self, unknown: int, sd: float) -> Interval:
         """Sigma and 95 % interval of one unknown."""

@@ -201,13 +201,16 @@ def measure_recording(
         views=tuple(result.view for result in results if result.view is not None),
         sferics=sferics,
         model=model,
-        false_alarms_per_hour=_mean([result.false_alarms_per_hour for result in results]),
+        false_alarms_per_hour=_mean_rate(results),
     )
 
 
-def _mean(values: list[float]) -> float:
-    """Mean over the blocks; an empty recording has none."""
-    return float(np.mean(values)) if values else float("nan")
+def _mean_rate(results: list[_BlockResult]) -> float:
+    """False alarms to expect in an hour, block by block by its length."""
+    if not results:
+        return float("nan")
+    duration_s = [result.sferics.duration_s for result in results]
+    return float(np.average([one.false_alarms_per_hour for one in results], weights=duration_s))
 
 
 def _bank_model(recording: Recording, settings: Settings) -> FieldLineModel:

@@ -13,7 +13,6 @@ from fieldlines.constants import SPEED_OF_LIGHT_M_S
 MARK_SIGMA = 4.0
 LOCAL_S = 0.012  # a sferic is over within it; a whistler, at any frequency, is not
 GUARD_S = 0.001
-FRONT_SHARE = 0.25  # of the peak: below it a strong sferic still rings ahead of its own front
 FRONT_SHARE = 0.1  # of the peak: what is weaker ahead of it is ringing of the zero-phase filters
 
 

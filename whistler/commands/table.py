@@ -79,7 +79,7 @@ def recording_table(measurement: Measurement) -> str:
         f"  {recording.duration_s:.1f} s at {recording.sample_rate_hz} Hz from {began}",
     ]
     if math.isfinite(rate):
-        lines.append(f"  false alarms to expect: {rate:.2g} an hour, by the recording reversed")
+        lines.append(f"  false alarms to expect: {rate:.2g} an hour, by this recording reversed")
     return "\n".join([*lines, rows_table(measurement.rows)])
 
 
