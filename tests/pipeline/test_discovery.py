@@ -7,11 +7,14 @@ import pytest
 from makers import clean_audio, dispersed, in_noise
 
 from fieldlines import FieldLineModel, travel_time
+from whistler import follow as follow_module
 from whistler.cleaning import CleanAudio
 from whistler.discovery import Banks, find_traces
-from whistler.follow import Detection
+from whistler.follow import Detection, OneHop
+from whistler.search import Candidate
 from whistler.settings import Settings
 from whistler.spectrogram import spectrogram
+from whistler.trace import Straightened, Trace, TraceReading
 
 
 @pytest.fixture
@@ -119,3 +122,39 @@ def test_rising_tones_are_not_followed(model: FieldLineModel, find) -> None:
     audio = in_noise(wave, cell_snr_db=22.0, generator=generator)
     assert len(find(audio)) == 1
     assert find(clean_audio(audio.samples[::-1].copy())) == []
+
+
+def test_weak_traces_stand_out_of_wider_sub_bands(
+    model: FieldLineModel, find, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Recovery: of eight whistlers near the limit, wider sub-bands bear out more than fine ones."""
+    audio = [
+        in_noise(whistler(model, 3.2), cell_snr_db=1.0, generator=np.random.default_rng(seed))
+        for seed in range(40, 48)
+    ]
+    both = sum(len(find(one)) for one in audio)
+    monkeypatch.setattr(follow_module, "COARSE", follow_module.FINE)
+    fine = sum(len(find(one)) for one in audio)
+    assert both > fine
+    assert both <= len(audio)
+
+
+def test_what_lies_on_a_known_trace_is_left_out(model: FieldLineModel) -> None:
+    """Identity: 20 ms after the curve the other trace's power becomes 1, the rest stays."""
+    lag_s = np.linspace(-0.1, 0.1, 401)
+    frequency_hz = np.linspace(1500.0, 6500.0, 6)
+    power = np.full((6, 401), 7.0)
+    view = Straightened(power, frequency_hz, lag_s, 300.0)
+    path = OneHop(2.8, 1e9, 1.02)
+    points = Trace(frequency_hz, path.curve(model)(frequency_hz), np.full(6, 1e-3))
+    candidate = Candidate(
+        2.3, 2.8, 1e9, (1000.0, 7000.0), 20.0, 0.0, frequency_hz, points.time_s, 0.0
+    )
+    known = Detection(candidate, TraceReading(points, np.full(6, 50.0), 0.001), path, 20.0)
+    curve = OneHop(2.8, 1e9, 1.0).curve(model)
+    left = follow_module._apart_from([known], view, curve, model)
+    inside = np.abs(lag_s - 0.02) < 0.0053
+    outside = np.abs(lag_s - 0.02) > 0.0057
+    assert np.all(left.power[:, inside] == 1.0)
+    assert np.all(left.power[:, outside] == 7.0)
+    assert np.all(view.power == 7.0)
