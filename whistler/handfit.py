@@ -191,7 +191,7 @@ def _start(item: PathTrace, ties: Ties, settings: Settings, year: float) -> Star
     trace = item.trace
     top_l = float(model.dipole.l_from_equatorial_gyrofrequency(1.1 * trace.frequency_hz.max()))
     wanted = ties.l_value
-    l_grid = [wanted] if wanted else np.linspace(1.4, min(6.5, max(top_l, 1.5)), 40)
+    l_grid = [wanted] if wanted is not None else np.linspace(1.4, min(6.5, max(top_l, 1.5)), 40)
     weight = 1.0 / trace.time_sd_s**2
     best, least = (2.5, 1e9, 0.0), np.inf
     for l_value in l_grid:

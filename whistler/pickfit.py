@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from datetime import datetime, timedelta
+from typing import Any
 
 import numpy as np
 
@@ -15,6 +16,7 @@ from whistler.errors import Notice, UsageError
 from whistler.fit import model_curve
 from whistler.handfit import HandStroke, Start, check_points, fit_by_hand, hop_orders
 from whistler.model import field_line_model
+from whistler.picks import RANGES
 from whistler.problem import L_LIMITS, PathTrace
 from whistler.results import DIFFUSE_S, Sighting
 from whistler.rows import WhistlerRow, row_model
@@ -69,8 +71,10 @@ def fit_picks(
     Raises
     ------
     UsageError
-        When an edit cannot be made, or a trace has fewer than three points.
+        When an edit cannot be made, a trace has fewer than three points, or a time or L is outside
+        its range.
     """
+    check_ties(sferic_time_s, sferic_time_sd_s, lightning_time_s=lightning_time_s, l_value=l_value)
     edited = apply_edits(traces, edits)
     check_points(edited)
     orders = hop_orders(hops, len(edited))
@@ -136,10 +140,11 @@ def refit(
     Raises
     ------
     UsageError
-        When the rows are of several strokes, an edit cannot be made, or a trace has fewer than
-        three points.
+        When the rows are of several strokes, an edit cannot be made, a trace has fewer than three
+        points, or a time or L is outside its range.
     """
     settings = settings or Settings()
+    check_ties(sferic_time_s, sferic_time_sd_s, lightning_time_s=lightning_time_s, l_value=l_value)
     _check_stroke(rows)
     edited = apply_edits({str(k): row.trace for k, row in enumerate(rows, start=1)}, edits)
     check_points(edited)
@@ -167,6 +172,43 @@ def refit(
     )
     found = fit_by_hand(task, _known(rows, items) if l_value is None else {})
     return _flagged(found, [row.trace for row in rows], earlier=[row.flags for row in rows])
+
+
+def check_ties(
+    sferic_time_s: float | None,
+    sferic_time_sd_s: float,
+    *,
+    lightning_time_s: float | None,
+    l_value: float | None,
+) -> None:
+    """Refuse times and an L that no fit can be tied to; None passes.
+
+    Parameters
+    ----------
+    sferic_time_s, sferic_time_sd_s : float
+        Causative sferic and its one-sigma.
+    lightning_time_s : float, optional
+        Time of the lightning itself.
+    l_value : float, optional
+        L to hold the paths at.
+
+    Raises
+    ------
+    UsageError
+        Naming the first that is no number within its range, as the option it is given with.
+    """
+    given: tuple[tuple[str, Any, tuple[float, float]], ...] = (  # a stored one may be anything
+        ("--sferic-time", sferic_time_s, RANGES["time_s"]),
+        ("--sferic-time-sd", sferic_time_sd_s, RANGES["time_sd_s"]),
+        ("--lightning-time", lightning_time_s, RANGES["time_s"]),
+        ("--l-value", l_value, L_LIMITS),
+    )
+    for option, value, (low, high) in given:
+        if value is not None and not (
+            isinstance(value, int | float | np.number) and low <= value <= high
+        ):
+            reason = f"{value} is not a number from {low:g} to {high:g}"
+            raise UsageError(Notice("E601", option, reason, "choose a number in that range"))
 
 
 def time_zero(rows: Sequence[WhistlerRow]) -> datetime | None:
@@ -257,9 +299,6 @@ def _sighting(row: WhistlerRow) -> Sighting:
 
 
 def _sferic(time_s: float | None, sd_s: float) -> tuple[float, float] | None:
-    if not sd_s > 0.0:
-        reason = f"{sd_s} s is not above 0"
-        raise UsageError(Notice("E601", "sferic_time_sd_s", reason, "give its one-sigma in s"))
     return None if time_s is None else (time_s, sd_s)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, fields
 from pathlib import Path, PurePath
@@ -10,7 +11,9 @@ from typing import Any
 
 import numpy as np
 
+from whistler.clock import parse_time
 from whistler.errors import Notice, UsageError
+from whistler.picks import RANGES
 from whistler.rows import COLUMNS, NAN, WhistlerRow
 from whistler.settings import Settings
 from whistler.station import station_from_dict
@@ -19,6 +22,26 @@ from whistler.trace import Trace
 RUN_RECORD = "run.json"
 REQUIRED = ("recording", "group", "hops", "trace")
 NAMED = 12  # strokes that a message lists
+MOST_HOPS = 20
+YEARS = (1000, 9000)  # of a clock time
+LARGEST = 1e30  # of any number of a row
+SIGNED = (-math.inf, math.inf)
+LIMITS = {
+    "hops": (1, MOST_HOPS),
+    "sferic_time_s": RANGES["time_s"],
+    "lightning_time_s": RANGES["time_s"],
+    "sferic_probability": (0.0, 1.0),
+    "hop_probability": (0.0, 1.0),
+    "l_value": (1.2, 8.0),
+    "equatorial_density_cm3": (1e-6, 1e12),  # more than there is anywhere
+    "l_density_correlation": (-1.0, 1.0),
+    "density_exponent": (-2.0, 8.0),  # what a model takes
+    "fo_f2_mhz": (0.0, 30.0),
+    "frequency_low_hz": RANGES["frequency_hz"],
+    "frequency_high_hz": RANGES["frequency_hz"],
+    "snr_db": SIGNED,
+}
+"""Lowest and highest value of the numbers of a row; the others are only not below 0."""
 
 
 @dataclass(frozen=True)
@@ -93,7 +116,7 @@ def row_from_json(values: dict[str, Any]) -> WhistlerRow:
     Raises
     ------
     ValueError
-        When a key is missing, or a value is of the wrong kind.
+        When a key is missing, or a value is of the wrong kind or outside its range.
 
     Examples
     --------
@@ -114,7 +137,9 @@ def row_from_json(values: dict[str, Any]) -> WhistlerRow:
     flags = values.get("flags", [])
     if not (isinstance(flags, list) and all(isinstance(word, str) for word in flags)):
         raise ValueError(f"flags={flags!r} is not a list of words")
-    return WhistlerRow(**known, flags=tuple(flags), trace=_trace(values["trace"]))
+    row = WhistlerRow(**known, flags=tuple(flags), trace=_trace(values["trace"]))
+    _check_sferic(row)
+    return row
 
 
 def settings_from_dict(values: dict[str, Any], *, path: Path) -> Settings:
@@ -143,6 +168,9 @@ def settings_from_dict(values: dict[str, Any], *, path: Path) -> Settings:
     unknown = sorted(set(values) - {field.name for field in fields(Settings)})
     if unknown:
         raise _refusal(path, f"unknown setting {unknown[0]!r}")
+    edits = values.get("options", {}).get("edits", [])
+    if not (isinstance(edits, list | tuple) and all(isinstance(line, str) for line in edits)):
+        raise _refusal(path, "edits that are not a list of lines")
     known = {name: _frozen(value) for name, value in values.items()}
     if "station" in values:
         known["station"] = station_from_dict(values["station"], path=path)
@@ -265,19 +293,40 @@ def _number(name: str, value: Any) -> float:
         return NAN
     if isinstance(value, bool) or not isinstance(value, int | float):
         raise ValueError(f"{name}={value!r} is not a number")
-    return float(value)
+    return float(_within(name, value, LIMITS.get(name, (0.0, math.inf))))
 
 
 def _whole(name: str, value: Any) -> int:
     if isinstance(value, bool) or not isinstance(value, int):
         raise ValueError(f"{name}={value!r} is not a whole number")
+    return int(_within(name, value, LIMITS.get(name, SIGNED)))
+
+
+def _within(name: str, value: float, limits: tuple[float, float]) -> float:
+    low, high = limits
+    if abs(value) > LARGEST:
+        raise ValueError(f"{name} is a number beyond {LARGEST:g}")
+    if not low <= value <= high:
+        raise ValueError(f"{name}={value:.6g} is outside {low:g} to {high:g}")
     return value
 
 
-def _text_or_none(name: str, value: Any) -> str | None:
-    if value is not None and not isinstance(value, str):
+def _word(name: str, value: Any) -> str:
+    if not isinstance(value, str):
         raise ValueError(f"{name}={value!r} is not text")
     return value
+
+
+def _clock_or_none(name: str, value: Any) -> str | None:
+    if value is None:
+        return None
+    try:
+        year = parse_time(_word(name, value)).year
+    except (UsageError, OverflowError):
+        raise ValueError(f"{name}={value!r} is not a time") from None
+    if not YEARS[0] <= year <= YEARS[1]:
+        raise ValueError(f"{name}={value!r} is outside the years {YEARS[0]} to {YEARS[1]}")
+    return str(value)
 
 
 def _truth(name: str, value: Any) -> bool:
@@ -289,8 +338,8 @@ def _truth(name: str, value: Any) -> bool:
 _KINDS: dict[str, Callable[[str, Any], Any]] = {
     "double": _number,
     "integer": _whole,
-    "string": _text_or_none,
-    "isotime": _text_or_none,
+    "string": _word,
+    "isotime": _clock_or_none,
     "boolean": _truth,
 }
 
@@ -299,13 +348,29 @@ def _trace(values: Any) -> Trace:
     names = ("frequency_hz", "time_s", "time_sd_s")
     if not (isinstance(values, dict) and set(names) <= set(values)):
         raise ValueError("trace without frequency_hz, time_s and time_sd_s")
-    try:
-        columns = [np.array(values[name], dtype=np.float64) for name in names]
-    except (TypeError, ValueError):
-        raise ValueError("trace holds something other than numbers") from None
-    if not all(column.shape == (len(columns[0]),) for column in columns):
+    if not all(isinstance(values[name], list) for name in names):
+        raise ValueError("trace with something other than lists")
+    columns = [
+        np.array([_point(name, value) for value in values[name]], np.float64) for name in names
+    ]
+    if len({len(column) for column in columns}) > 1:
         raise ValueError("trace with columns of different lengths")
     return Trace(*columns)
+
+
+def _point(name: str, value: Any) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise ValueError(f"trace holds something other than numbers ({name}={value!r})")
+    return float(_within(name, value, RANGES[name]))
+
+
+def _check_sferic(row: WhistlerRow) -> None:
+    """Refuse an identified sferic that no fit could lean on."""
+    if not row.sferic_seen:
+        return
+    low, high = RANGES["time_sd_s"]
+    if not (math.isfinite(row.sferic_time_s) and low <= row.sferic_time_sd_s <= high):
+        raise ValueError(f"sferic_seen without its time and one-sigma ({low:g} to {high:g} s)")
 
 
 def _refusal(path: Path, reason: str, step: str = "name a catalogue.jsonl") -> UsageError:

@@ -339,6 +339,12 @@ def test_rows_and_settings_come_back_from_json(astray: list[WhistlerRow]) -> Non
     assert row_values(row_from_json(newer)) == row_values(astray[0])
 
 
+def point(**values: object) -> dict[str, object]:
+    """A trace of one point."""
+    whole = {"frequency_hz": 2000.0, "time_s": 1.0, "time_sd_s": 0.002, **values}
+    return {name: [value] for name, value in whole.items()}
+
+
 @pytest.mark.parametrize(
     ("change", "message"),
     [
@@ -350,6 +356,26 @@ def test_rows_and_settings_come_back_from_json(astray: list[WhistlerRow]) -> Non
         ({"trace": {}}, "trace without frequency_hz"),
         ({"trace": {"frequency_hz": [1], "time_s": [], "time_sd_s": [1]}}, "different lengths"),
         ({"trace": {"frequency_hz": ["x"], "time_s": [1], "time_sd_s": [1]}}, "other than numbers"),
+        ({"trace": point(time_sd_s=0)}, "time_sd_s=0 is outside 1e-06 to 10"),
+        ({"trace": point(time_s=None)}, r"other than numbers \(time_s=None\)"),
+        ({"trace": point(time_s=2e6)}, r"time_s=2e\+06 is outside"),
+        ({"trace": point(frequency_hz=-4)}, "frequency_hz=-4 is outside 1 to 100000"),
+        ({"trace": {**point(), "time_s": 1.0}}, "other than lists"),
+        ({"recording": None}, "recording=None is not text"),
+        ({"l_value": -2}, "l_value=-2 is outside 1.2 to 8"),
+        ({"l_value": float("inf")}, "l_value is a number beyond"),
+        ({"equatorial_density_cm3": 0}, "equatorial_density_cm3=0 is outside"),
+        ({"equatorial_density_cm3": 10**400}, "equatorial_density_cm3 is a number beyond"),
+        ({"l_value_sd": -0.1}, "l_value_sd=-0.1 is outside 0 to inf"),
+        ({"sferic_probability": 1.1}, "sferic_probability=1.1 is outside 0 to 1"),
+        ({"hops": 0}, "hops=0 is outside 1 to 20"),
+        ({"hops": 99}, "hops=99 is outside 1 to 20"),
+        ({"time": "junk"}, "time='junk' is not a time"),
+        ({"time": "0001-01-01T00:00:00+12:00"}, "is not a time"),
+        ({"time": "0500-01-01"}, "is outside the years 1000 to 9000"),
+        ({"frequency_low_hz": -4}, "frequency_low_hz=-4 is outside"),
+        ({"sferic_seen": True}, "without its time and one-sigma"),
+        ({"sferic_seen": True, "sferic_time_s": 1.0, "sferic_time_sd_s": 0}, "without its time"),
     ],
 )
 def test_a_fault_in_a_saved_row_is_named(change: dict[str, object], message: str) -> None:

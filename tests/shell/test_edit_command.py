@@ -216,6 +216,7 @@ def test_the_stroke_must_be_clear(whistler: Whistler, results: Path) -> None:
         ('{"whistlers": [], "settings": {"hops": 9}}', "unknown setting 'hops'"),
         ('{"whistlers": [], "settings": {"station": 9}}', "settings that are not an object"),
         ('{"whistlers": [], "settings": {"max_hops": "x"}}', "a setting is of the wrong kind"),
+        ('{"whistlers": [], "settings": {"options": {"edits": 5}}}', "not a list of lines"),
         ('{"whistlers": [], "settings": {}}', "no whistlers"),
         ('{"recording": "a", "group": 1, "hops": 1}', "row 1: no 'trace'"),
     ],
@@ -225,6 +226,39 @@ def test_a_faulty_result_is_refused(tmp_path: Path, text: str, reason: str) -> N
     assert is_saved_result(tmp_path / "x")
     with pytest.raises(UsageError, match=reason):
         select_stroke(read_results(tmp_path / "x"))
+
+
+@pytest.mark.parametrize(
+    ("change", "reason"),
+    [
+        ({"recording": None}, "recording=None"),
+        ({"l_value": -2}, "l_value=-2"),
+        ({"hops": 99}, "hops=99"),
+        ({"time": "junk"}, "time='junk'"),
+        ({"frequency_low_hz": -4}, "frequency_low_hz=-4"),
+    ],
+)
+def test_a_damaged_row_is_named(
+    whistler: Whistler, results: Path, change: dict[str, Any], reason: str
+) -> None:
+    """Identity: file and row are named, whichever stroke was asked for."""
+    path = results / "catalogue.jsonl"
+    first, second, *others = path.read_text().splitlines()
+    path.write_text("\n".join([first, json.dumps({**json.loads(second), **change}), *others]))
+    run = fit(whistler, group=2)
+    assert (run.code, run.codes, run.out) == (2, ["E609"], "")
+    assert f'"results/catalogue.jsonl": row 2: {reason}' in run.err
+
+
+def test_a_stored_tie_outside_its_range_is_refused(whistler: Whistler, results: Path) -> None:
+    """Identity: an L that an earlier fit is said to have held is checked like a given one."""
+    record = json.loads((results / "run.json").read_text())
+    for stored_l in (0, "x"):
+        record["settings"]["options"] = {"l_value": stored_l}
+        (results / "run.json").write_text(json.dumps(record))
+        run = fit(whistler)
+        assert (run.code, run.codes) == (2, ["E601"])
+        assert f'"--l-value": {stored_l} is not a number from 1.25 to 7.5' in run.err
 
 
 def test_rows_without_the_record_of_their_run(whistler: Whistler, results: Path) -> None:

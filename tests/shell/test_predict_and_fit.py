@@ -172,3 +172,30 @@ def test_too_few_picks(whistler: Whistler, tmp_path: Path) -> None:
     picks_from(tmp_path / "p.csv", "frequency_hz,time_s\n1000,2\n2000,1.8\n")
     run = whistler("fit", "p.csv")
     assert (run.code, run.codes) == (2, ["E604"])
+
+
+@pytest.mark.parametrize(
+    ("option", "value"),
+    [
+        *[("--l-value", value) for value in ("0", "20", "nan", "-3")],
+        *[("--sferic-time-sd", value) for value in ("1e-300", "0", "11", "nan")],
+        ("--sferic-time", "inf"),
+        ("--lightning-time", "1e7"),
+    ],
+)
+def test_a_tie_outside_its_range_is_refused(
+    whistler: Whistler, picks: Path, option: str, value: str
+) -> None:
+    """Identity: the option is named, with what it may be; nothing is written."""
+    run = whistler("fit", picks.name, f"{option}={value}", "--out", "never")
+    assert (run.code, run.codes, run.out) == (2, ["E601"], "")
+    assert f'"{option}": {float(value)} is not a number from ' in run.err
+    assert not (picks.parent / "never").exists()
+
+
+def test_the_least_sferic_sigma_is_fitted(whistler: Whistler, picks: Path) -> None:
+    """Identity: what is allowed works, and its result can be fitted again."""
+    near = ("--sferic-time", "10.03", "--sferic-time-sd", "1e-6", "--out", "out")
+    assert whistler("fit", picks.name, *near).code == 0
+    again = whistler("fit", "out/catalogue.jsonl", "--l-value", "3")
+    assert (again.code, again.err) == (0, "")

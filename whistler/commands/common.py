@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import io
-import math
 import os
 import sys
 from collections.abc import Callable, Iterator, Sequence
@@ -172,22 +171,6 @@ def require_hops(hops: int) -> None:
     if not 1 <= hops <= MOST_HOPS:
         reason = f"{hops} is outside 1 to {MOST_HOPS}"
         raise UsageError(Notice("E601", "--hops", reason, "choose a number in that range"))
-
-
-def require_finite(**options: float | None) -> None:
-    """Refuse option values that are not finite numbers; None passes.
-
-    Raises
-    ------
-    UsageError
-        Naming the first such option.
-    """
-    for name, value in options.items():
-        if value is not None and not math.isfinite(value):
-            flag = "--" + name.replace("_", "-")
-            raise UsageError(
-                Notice("E601", flag, f"{value} is not a finite number", "give one in seconds")
-            )
 
 
 @contextmanager

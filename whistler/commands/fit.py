@@ -136,9 +136,6 @@ def fit(
         recording=recording,
         free_time=free_time,
     )
-    common.require_finite(
-        sferic_time=sferic_time, sferic_time_sd=sferic_time_sd, lightning_time=lightning_time
-    )
     job = read_job(source, told, tell=common.Reporter(quiet=quiet))
     if out is not None:
         job.keep_input(out)

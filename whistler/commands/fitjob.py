@@ -15,7 +15,7 @@ from whistler.edit import Edit
 from whistler.editfile import edit_line, parse_edit, read_edits
 from whistler.errors import Notice, OutputError, UsageError
 from whistler.handfit import hop_orders
-from whistler.pickfit import fit_picks, refit, time_zero
+from whistler.pickfit import check_ties, fit_picks, refit, time_zero
 from whistler.picks import read_picks
 from whistler.saved import SavedResults, is_saved_result, read_results, select_stroke
 from whistler.settings import Settings
@@ -157,6 +157,7 @@ def read_job(path: Path, told: Told, *, tell: common.Reporter) -> Job:
     if told.free_time and told.ties["sferic_time_s"] is not None:
         reason = "no sferic asked for, and one given with --sferic-time"
         raise UsageError(Notice("E605", "--free-time", reason, "leave one of them out"))
+    check_ties(**told.ties)
     if is_saved_result(path):
         return _saved_job(read_results(path), told, tell)
     return _picks_job(path, told)
