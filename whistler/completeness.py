@@ -20,7 +20,7 @@ from whistler.savefile import fault_notice
 from whistler.settings import Settings
 
 MOST_EMPTY = 3  # searches of a piece in a row into which no whistler fitted
-LIMITS: dict[str, tuple[float, float]] = {"injections": (1, 1e5), "seed": (0, 2**63 - 1)}
+LIMITS: dict[str, tuple[int, int]] = {"injections": (1, 100_000), "seed": (0, 2**63 - 1)}
 SNR_LIMITS_DB = (-20.0, 40.0)
 
 Tell = Callable[[Notice], None]
@@ -48,9 +48,9 @@ class Request:
 
     def __post_init__(self) -> None:
         """Check the ranges."""
-        for name, (low, high) in LIMITS.items():
-            if not low <= getattr(self, name) <= high:
-                _refuse(name, f"{getattr(self, name)} is outside {low:g} to {high:.0f}")
+        for name, (least, most) in LIMITS.items():
+            if not least <= getattr(self, name) <= most:
+                _refuse(name, f"{getattr(self, name)} is outside {least} to {most}")
         low, high = self.snr_range_db
         if not SNR_LIMITS_DB[0] <= low < high <= SNR_LIMITS_DB[1]:
             _refuse("snr-range", f"{low:g} to {high:g} is no increasing pair within -20 to 40")
@@ -172,12 +172,20 @@ def measure_completeness(
         except Exception as error:  # whatever is wrong with this file, the others are still used
             refused.append(fault_notice(recording.path, error))
             tell(refused[-1])
-    missing = request.injections - len(done.injections)
-    if missing and recordings:
-        reason = f"{missing} of {request.injections} whistlers could not be injected"
-        tell(Notice("W208", str(folder), reason, "the others count; longer recordings take more"))
+    if recordings:
+        _tell_missing(folder, len(done.injections), request.injections, tell)
     used = tuple(recordings)
     return Completeness(settings, request, used, tuple(refused), tuple(done.injections), done.tally)
+
+
+def _tell_missing(folder: Path, injected: int, wanted: int, tell: Tell) -> None:
+    """Say when fewer whistlers were injected than asked for; none at all is an error."""
+    if injected == 0:
+        reason = f"none of {wanted} whistlers could be injected: silent, too short or unusable"
+        tell(Notice("E208", str(folder), reason, "name a folder of longer recordings with noise"))
+    elif injected < wanted:
+        reason = f"{wanted - injected} of {wanted} whistlers could not be injected"
+        tell(Notice("W208", str(folder), reason, "the others count; longer recordings take more"))
 
 
 def _open_all(

@@ -24,6 +24,7 @@ CODES = {
     "W206": "silence: one constant value for 0.1 s or more",
     "W207": "dead channel",
     "W208": "too little audio for the synthetic whistlers asked for",
+    "E208": "no audio that takes a synthetic whistler",
     "E115": "a folder without recordings",
     "E301": "the recording's date lies outside the tables of the Earth's field",
     "N301": "start time unknown: times are relative, the Earth's field of 2025.0 is used",

@@ -13,6 +13,8 @@ import pytest
 import soundfile
 
 from whistler.cli import run
+from whistler.completeness import Request
+from whistler.errors import UsageError
 from whistler.pieces import Piece, plan_pieces
 from whistler.recording import open_recording
 from whistler.synthesis.files import flac_bytes
@@ -190,7 +192,26 @@ def test_bad_and_short_recordings_are_named_and_the_rest_used(
     soundfile.write(tmp_path / "short.wav", noise[1, : 16_000 * 2], 16_000)
     outcome = completeness(capsys, tmp_path, injections=1)
     assert (outcome.code, outcome.out) == (4, "")
-    assert outcome.codes == ["E102", "N301", "W208"]
+    assert outcome.codes == ["E102", "N301", "E208"]
+
+
+def test_silent_audio_is_an_error_even_when_quiet(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Identity: no whistler has a strength in silence; the exit code comes with a line."""
+    soundfile.write(tmp_path / "silent.wav", np.zeros(16_000 * 20), 16_000)
+    outcome = completeness(capsys, tmp_path, "--quiet", injections=2)
+    assert (outcome.code, outcome.codes, outcome.out) == (4, ["E208"], "")
+    assert "none of 2 whistlers could be injected" in outcome.err
+
+
+def test_limits_of_whole_numbers_are_written_as_such() -> None:
+    """Reference: 2**63 - 1 by its digits; the limits themselves are allowed."""
+    assert Request(injections=100_000, seed=2**63 - 1).seed == 2**63 - 1
+    with pytest.raises(UsageError, match=r"--seed.*-1 is outside 0 to 9223372036854775807;"):
+        Request(seed=-1)
+    with pytest.raises(UsageError, match=r"--injections.*100001 is outside 1 to 100000;"):
+        Request(injections=100_001)
 
 
 def test_pieces_of_a_night_are_spread_over_it() -> None:
