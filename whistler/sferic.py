@@ -150,10 +150,6 @@ class Causes:
     time_s: NDArray[np.float64]
     odds: NDArray[np.float64]
 
-    def probability(self) -> NDArray[np.float64]:
-        """Return the probability of each sferic; what is missing to one is "none"."""
-        return np.asarray(self.odds / (1.0 + self.odds.sum()))
-
 
 def possible_causes(catalogue: SfericCatalogue, *, predicted_s: float, sd_s: float) -> Causes:
     r"""Return the sferics near a predicted time with their odds.

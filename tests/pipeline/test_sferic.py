@@ -8,13 +8,17 @@ import numpy as np
 import pytest
 from makers import block
 
+from fieldlines import FieldLineModel, saturated_density
 from whistler.cleaning import clean
+from whistler.evidence import STORM_SHARE, Reading, Surroundings, weigh
+from whistler.fit import StrokeFit
 from whistler.problem import sferic_path_s
 from whistler.settings import Settings
 from whistler.sferic import (
     CAUSE_STRONGER,
     CAUSE_UNSEEN,
     GUIDE_HEIGHT_M,
+    READING_SD_S,
     SfericCatalogue,
     front_lag_s,
     possible_causes,
@@ -27,7 +31,50 @@ def catalogue(time_s: list[float], amplitude: list[float], duration_s: float) ->
     return SfericCatalogue(np.array(time_s), np.array(amplitude), duration_s)
 
 
-def test_odds_follow_the_formula() -> None:
+L_VALUE = 2.8
+
+
+def read(
+    model: FieldLineModel,
+    seen: SfericCatalogue,
+    *,
+    late_s: float = 0.0,
+    departure: float = 0.0,
+    density_sd: float = 0.1,
+    sd_s: float = 0.002,
+    correlation: float = 0.0,
+    hops: int = 2,
+    prior: str = "none",
+) -> Reading:
+    """What `weigh` makes of a fit of L 2.8 that is `late_s` late, its ln density off the prior.
+
+    `sd_s` is the one-sigma of where the sferic must be, its reading included.
+    """
+    time_sd_s = np.sqrt(sd_s**2 - READING_SD_S**2)
+    covariance = np.zeros((3, 3))
+    covariance[1, 1], covariance[2, 2] = density_sd**2, time_sd_s**2
+    covariance[1, 2] = covariance[2, 1] = correlation * density_sd * time_sd_s
+    fit = StrokeFit(
+        log_l=np.log([L_VALUE]),
+        log_density=np.log([float(saturated_density(L_VALUE))]) + departure,
+        lightning_time_s=late_s,
+        covariance=covariance,
+        rms_s=np.zeros(1),
+        chi_square=1.0,
+        freedom=1,
+        converged=True,
+        at_bound=np.zeros(1, bool),
+        tie_misfit=0.0,
+        used=(),
+        model=model,
+        open_sigmas=np.zeros(0),
+        total_covariance=covariance,
+    )
+    settings = Settings(stroke_distance_sd_m=0.0, density_prior=prior)
+    return weigh(fit, hops, around=Surroundings(seen, model, settings))
+
+
+def test_odds_follow_the_formula(model: FieldLineModel) -> None:
     """Reference (worked by hand): two equal sferics, one on the spot and one a sigma away.
 
     Background 2 / 0.5 s = 4 a second; density on the spot 1 / (sqrt(2 pi) 2 ms) = 199.5 a second;
@@ -40,11 +87,13 @@ def test_odds_follow_the_formula() -> None:
     prior = (1.0 - CAUSE_UNSEEN) / CAUSE_UNSEEN
     wanted = prior * 199.5 / 4.0 * amplitude * np.array([1.0, np.exp(-0.5)])
     np.testing.assert_allclose(causes.odds, wanted, rtol=1e-3)
-    np.testing.assert_allclose(causes.probability(), wanted / (1.0 + wanted.sum()), rtol=1e-3)
+    reading = read(model, seen, late_s=0.2)
+    assert reading.best_cause == 0
+    assert reading.cause_probability == pytest.approx(wanted[0] / (1.0 + wanted.sum()), rel=1e-3)
 
 
-def test_probabilities_sum_to_one_with_none() -> None:
-    """Identity: sferics and "none of those" share the certainty; far ones take no part."""
+def test_the_likeliest_shares_the_certainty_with_all_and_none(model: FieldLineModel) -> None:
+    """Identity: its part of all odds and "none of those"; sferics far off take no part."""
     generator = np.random.default_rng(1)
     for _ in range(20):
         count = int(generator.integers(0, 40))
@@ -52,47 +101,71 @@ def test_probabilities_sum_to_one_with_none() -> None:
             np.sort(generator.uniform(0, 1, count)), generator.lognormal(2, 0.8, count), 1.0
         )
         causes = possible_causes(seen, predicted_s=0.5, sd_s=0.01)
-        none = 1.0 / (1.0 + causes.odds.sum())
-        assert causes.probability().sum() + none == pytest.approx(1.0, abs=1e-12)
         assert np.all(np.abs(causes.time_s - 0.5) <= 0.04)
         np.testing.assert_array_equal(causes.time_s, seen.time_s[causes.index])
-    lone = possible_causes(catalogue([], [], 1.0), predicted_s=0.5, sd_s=0.01)
-    assert lone.probability().size == 0
+        reading = read(model, seen, late_s=0.5, sd_s=0.01)
+        if causes.odds.size:
+            best = int(np.argmax(causes.odds))
+            wanted = causes.odds[best] / (1.0 + causes.odds.sum())
+            assert reading.best_cause == causes.index[best]
+            assert reading.cause_probability == pytest.approx(wanted, abs=1e-12)
+    lone = read(model, catalogue([], [], 1.0), late_s=0.5, sd_s=0.01)
+    assert (lone.best_cause, lone.cause_probability) == (-1, 0.0)
 
 
+@pytest.mark.parametrize("prior", ["none", "saturated"])
 @pytest.mark.parametrize(("rate_hz", "sd_s"), [(5.0, 0.003), (20.0, 0.003), (20.0, 0.015)])
-def test_probabilities_are_calibrated(rate_hz: float, sd_s: float) -> None:
-    """Recovery: in 3000 simulated catalogues, of those called p % likely, p % are the cause.
+def test_probabilities_are_calibrated(
+    model: FieldLineModel, rate_hz: float, sd_s: float, prior: str
+) -> None:
+    """Recovery: of 3000 likeliest sferics, of those called p % likely, p % are the cause.
 
-    Poisson background, lognormal amplitudes of 0.8 in ln, the cause stronger by the stated 0.7 and
-    unseen in the stated 15 %. In each of five ranges of p the share of true causes lies within
-    four sigma of a binomial plus 0.06: the law takes the amplitudes' mean and spread from the
-    catalogue itself, which holds the cause too.
+    Drawn are a density from the prior, a fit whose time and density err together, a Poisson
+    background with lognormal amplitudes of 0.8 in ln, the cause stronger by the stated 0.7 and
+    unseen in the stated share, its front read with the stated scatter. In each of five ranges of p
+    the share of true causes lies within four sigma of a binomial plus 0.06: the law takes the
+    amplitudes' mean and spread from the catalogue itself, which holds the cause too.
     """
     generator = np.random.default_rng(2)
-    stated, true = [], []
-    for _ in range(3000):
+    time_sd_s, density_sd, correlation = np.sqrt(sd_s**2 - READING_SD_S**2), 0.8, 0.9
+    prior_sd = Settings().density_prior_sd_dex * np.log(10.0)
+    way_s = sferic_path_s(L_VALUE)
+    heard_s = way_s + front_lag_s(way_s, front_hz=11_000.0)
+    share, hit = np.zeros(3000), np.zeros(3000, bool)
+    for trial in range(3000):
         count = generator.poisson(rate_hz * 10.0)
         time_s = generator.uniform(-5.0, 5.0, count)
         amplitude = np.exp(generator.normal(2.0, 0.8, count))
-        cause = -1
+        cause = -2
         if generator.random() > CAUSE_UNSEEN:
-            time_s = np.append(time_s, sd_s * generator.standard_normal())
+            time_s = np.append(time_s, heard_s + READING_SD_S * generator.standard_normal())
             amplitude = np.append(amplitude, np.exp(generator.normal(2.0 + CAUSE_STRONGER, 0.8)))
             cause = count
-        causes = possible_causes(
-            SfericCatalogue(time_s, amplitude, 10.0), predicted_s=0.0, sd_s=sd_s
+        storm = 3.0 if generator.random() < STORM_SHARE else 1.0
+        one, other = generator.standard_normal(2)
+        error = density_sd * (correlation * one + np.sqrt(1.0 - correlation**2) * other)
+        reading = read(
+            model,
+            SfericCatalogue(time_s, amplitude, 10.0),
+            late_s=time_sd_s * one,
+            departure=storm * prior_sd * generator.standard_normal() + error,
+            density_sd=density_sd,
+            sd_s=sd_s,
+            correlation=correlation,
+            hops=1,
+            prior=prior,
         )
-        stated += list(causes.probability())
-        true += list(causes.index == cause)
-    share, hit = np.array(stated), np.array(true)
+        share[trial], hit[trial] = reading.cause_probability, reading.best_cause == cause
+    judged = 0
     for low, high in ((0.02, 0.2), (0.2, 0.5), (0.5, 0.8), (0.8, 0.95), (0.95, 1.0)):
         inside = (share >= low) & (share < high)
         if inside.sum() < 20:
             continue
+        judged += 1
         wanted = share[inside].mean()
         scatter = np.sqrt(wanted * (1 - wanted) / inside.sum())
         assert hit[inside].mean() == pytest.approx(wanted, abs=4 * scatter + 0.06), (low, high)
+    assert judged >= 3
     assert share.sum() == pytest.approx(hit.sum(), rel=0.06)
 
 
