@@ -40,8 +40,6 @@ class Alignment:
         Of each sub-band with the mean of the others, 0 to 1.
     strength : ndarray, shape (bands,)
         Peak power of each sub-band over its noise.
-    width_share : float
-        RMS width of the pattern as a share of the travel time.
     centre_share_sd : float
         One-sigma of the pattern's centre as a share of the travel time: common to all sub-bands.
     """
@@ -49,7 +47,6 @@ class Alignment:
     lag_s: FloatArray
     correlation: FloatArray
     strength: FloatArray
-    width_share: float
     centre_share_sd: float
 
     def lag_sd_s(self, band_width_hz: float) -> FloatArray:
@@ -73,6 +70,9 @@ def align(
         Travel time at each sub-band; lags are compared in proportion to it.
     search_s : float
         Largest relative lag tried.
+    thickness_s : float
+        Thickness of the trace; what lies farther than three times it, and what the band width adds,
+        from the pattern's middle takes no part.
 
     Returns
     -------
@@ -94,7 +94,6 @@ def align(
         lag_s=(shift_s + centre_s) * travel_s / reference_s,
         correlation=correlation,
         strength=view.power.max(axis=1),
-        width_share=width_s / reference_s,
         centre_share_sd=CENTRE_SD * width_s / reference_s / np.sqrt(cells),
     )
 
