@@ -89,11 +89,6 @@ class StrokeFit:
         own = len(self.covariance)
         return self.total_covariance[:own, :own]
 
-    @property
-    def time_sd_s(self) -> float:
-        """One-sigma of the lightning time, with what the declared spreads leave open."""
-        return float(np.sqrt(self.whole_covariance[-1, -1]))
-
 
 def fit_stroke(
     traces: Sequence[PathTrace],
