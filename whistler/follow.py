@@ -35,6 +35,7 @@ PULSE_S = 0.004  # half of what a thin trace takes up in a sub-band
 WIDEST_S = 0.15  # lags looked at either side of a curve
 DIFFUSE_S = 0.005  # thickness from which the speckle inside a trace must be averaged
 LEAST_SPAN_HZ = 1500.0
+LEFT_SPAN_HZ = 1000.0  # of the sub-bands that share the pattern
 LEAST_SHARE = 0.5  # of the sub-bands inside the traced band that must have been timed
 WIDEST_GAP = 2.5  # inside a trace, in sub-bands
 FEWEST_TIMED = 4
@@ -61,15 +62,18 @@ class Split:
         That even a narrow band is split into.
     least_points : int
         Of these, that must be timed.
+    least_span_hz : float
+        That they must span.
     """
 
     spacing_hz: float
     least_bands: int
     least_points: int
+    least_span_hz: float
 
 
-FINE = Split(SUB_BAND_HZ, 10, 6)
-COARSE = Split(700.0, 7, 5)  # pulses of weak traces stand out more from wider sub-bands
+FINE = Split(SUB_BAND_HZ, 10, 6, LEAST_SPAN_HZ)
+COARSE = Split(700.0, 7, 5, 2200.0)  # pulses of weak traces stand out more from wider sub-bands
 
 
 @dataclass(frozen=True)
@@ -171,6 +175,8 @@ def follow(
     if found is None:
         return None
     reading, path = _sharpen(audio, found[0], path=found[1], model=model, known=near)
+    if np.ptp(reading.trace.frequency_hz) < LEFT_SPAN_HZ:
+        return None
     snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
     return Detection(candidate, reading, path, snr_db)
 
@@ -214,7 +220,7 @@ def _followed(
         fit, path = _refit(reading.trace, path, model)
         if fit.at_bound[0]:
             return None
-    if reading is None or not _borne_out(reading, split.least_points):
+    if reading is None or not _borne_out(reading, split):
         return None
     return (reading, path) if _as_found(candidate, path, model) else None
 
@@ -286,16 +292,16 @@ def _in_one_piece(reading: TraceReading) -> TraceReading | None:
     return replace(reading, trace=own, snr=reading.snr[run])
 
 
-def _borne_out(reading: TraceReading, least_points: int) -> bool:
+def _borne_out(reading: TraceReading, split: Split) -> bool:
     """Whether enough sub-bands, over a wide enough band, carry a fair share of the power."""
     strong = reading.snr >= WEAK_SHARE * np.quantile(reading.snr, 0.75)
     frequency_hz = reading.trace.frequency_hz[strong]
-    if len(frequency_hz) < least_points:
+    if len(frequency_hz) < split.least_points:
         return False
     span_hz = frequency_hz[-1] - frequency_hz[0]
     spacing_hz = float(np.min(np.diff(reading.trace.frequency_hz)))
     share = len(frequency_hz) / (1.0 + span_hz / spacing_hz)
-    return bool(span_hz >= LEAST_SPAN_HZ and share >= LEAST_SHARE)
+    return bool(span_hz >= split.least_span_hz and share >= LEAST_SHARE)
 
 
 def _sharpen(
