@@ -175,7 +175,7 @@ def follow(
     if found is None:
         return None
     reading, path = _sharpen(audio, found[0], path=found[1], model=model, known=near)
-    if np.ptp(reading.trace.frequency_hz) < LEFT_SPAN_HZ:
+    if np.ptp(reading.trace.frequency_hz) < LEFT_SPAN_HZ or _in_one_piece(reading) is None:
         return None
     snr_db = median_snr_db(spectrogram, reading.trace, curve=path.curve(model))
     return Detection(candidate, reading, path, snr_db)

@@ -22,10 +22,10 @@ GRID_REACH_S = 0.06  # lags that take part, at the reference travel time
 POWER_CLIP = 30.0  # a single bright sub-path must not be the whole pattern
 NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
-LEAST_SD_S = 1e-4  # a stroke's own pulse is no shorter
+LEAST_SD_S = 8e-5  # a stroke's own pulse is no shorter
 CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
-LAG_SD = 0.215  # of strong sub-bands, in units of one over the band width; from synthetic ducts
-NOISE_LAG_SD = 1.5  # in the same units, at a peak as strong as the noise; falls with its root
+LAG_SD = 0.187  # of strong sub-bands, in units of one over the band width; from synthetic ducts
+NOISE_LAG_SD = 1.3  # in the same units, at a peak as strong as the noise; falls with its root
 
 
 @dataclass(frozen=True)
