@@ -41,7 +41,7 @@ class Pass:
         Lags accepted in each round of de-dispersing and timing.
     borne_out : float
         Share of chance sums that their sub-bands bear out: 1 of 127 thin ones was, on recordings of
-        other seeds, but far out in their law more are; of diffuse ones, whose pulses are broad, most.
+        other seeds, but more of strong ones; of diffuse ones, whose pulses are broad, most.
     """
 
     smooth: int
