@@ -72,11 +72,14 @@ class Crossing:
         Median of what the hits allow, dB; NaN outside the strengths tried.
     interval_db : Interval
         95 % interval, dB; an end outside the strengths tried is NaN.
+    reached : {"below", "within", "above"} or None
+        Where that is, against the strengths tried; None when they are too few to tell.
     """
 
     share: float
     strength_db: float
     interval_db: Interval
+    reached: str | None
 
 
 def binomial_interval(hits: int, tried: int) -> Interval:
@@ -177,6 +180,7 @@ def strength_at(
     *,
     strength_db: Sequence[float] | NDArray[np.float64],
     hits: Sequence[bool] | NDArray[np.bool_],
+    range_db: tuple[float, float] | None = None,
 ) -> Crossing:
     r"""Return the strength at which a share of whistlers is found, with what is known of it.
 
@@ -188,11 +192,14 @@ def strength_at(
         Strengths tried, dB.
     hits : sequence of bool, shape (n,)
         Whether each was found.
+    range_db : tuple of float, optional
+        The range they were drawn from; by default the least and the largest of them.
 
     Returns
     -------
     Crossing
-        NaN where the strengths tried do not tell.
+        NaN outside that range; `reached` tells on which side. An interval that covers the whole
+        range tells nothing: everything is NaN, and `reached` None.
 
     Notes
     -----
@@ -205,22 +212,32 @@ def strength_at(
     curves with :math:`a` below it never do. No random numbers are involved.
     """
     strengths = np.asarray(strength_db, float)
-    unknown = Crossing(share, np.nan, Interval(np.nan, np.nan))
+    unknown = Crossing(share, np.nan, Interval(np.nan, np.nan), None)
     if not strengths.size:
         return unknown
-    at, weight = _weighed_crossings(share, strengths, np.asarray(hits, bool))
+    least, most = range_db or (float(strengths.min()), float(strengths.max()))
+    at, weight = _weighed_crossings(
+        share, strengths, hits=np.asarray(hits, bool), range_db=(least, most)
+    )
     order = np.argsort(at, kind="stable")
     total = np.cumsum(weight[order])
     tail = 0.5 * (1.0 - CONFIDENCE)
     places = np.searchsorted(total, np.array([tail, 0.5, 1.0 - tail]) * total[-1])
     quantiles = at[order][np.minimum(places, at.size - 1)]
-    inside = (quantiles >= strengths.min()) & (quantiles <= strengths.max())
-    low, middle, high = (float(value) for value in np.where(inside, quantiles, np.nan))
-    return Crossing(share, middle, Interval(low, high))
+    below, above = quantiles < least, quantiles > most
+    if below[0] and above[-1]:
+        return unknown
+    low, middle, high = (float(value) for value in np.where(below | above, np.nan, quantiles))
+    reached = "below" if below[1] else "above" if above[1] else "within"
+    return Crossing(share, middle, Interval(low, high), reached)
 
 
 def _weighed_crossings(
-    share: float, strengths: NDArray[np.float64], hits: NDArray[np.bool_]
+    share: float,
+    strengths: NDArray[np.float64],
+    *,
+    hits: NDArray[np.bool_],
+    range_db: tuple[float, float],
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Strength at which every curve of the grid passes the share, and the curve's weight."""
     from scipy.special import expit
@@ -229,7 +246,7 @@ def _weighed_crossings(
     levels, which = np.unique(steps, return_inverse=True)
     tried = np.bincount(which)
     found = np.bincount(which, weights=hits)
-    place = np.linspace(strengths.min() - BEYOND_DB, strengths.max() + BEYOND_DB, PLACES)
+    place = np.linspace(range_db[0] - BEYOND_DB, range_db[1] + BEYOND_DB, PLACES)
     width = np.geomspace(*WIDTHS_DB, WIDTH_COUNT)
     tops = np.arange(1, TOP_COUNT + 1) / TOP_COUNT
     rise = expit((levels * STRENGTH_STEP_DB - place[:, None, None]) / width[:, None])

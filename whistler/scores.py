@@ -51,8 +51,8 @@ def share_curves(result: Completeness) -> ShareCurves:
     return ShareCurves(
         thin=_by_strength(thin, result.request, step_db=THIN_STEP_DB),
         diffuse=_by_strength(thick, result.request, step_db=DIFFUSE_STEP_DB),
-        thin_crossings=_crossings(thin),
-        diffuse_crossings=_crossings(thick),
+        thin_crossings=_crossings(thin, result.request),
+        diffuse_crossings=_crossings(thick, result.request),
         by_l=binned(
             l_values,
             _found(result.injections),
@@ -143,10 +143,11 @@ def _by_strength(
     return binned(strengths, _found(injections), edges=np.linspace(low, high, count + 1))
 
 
-def _crossings(injections: Sequence[Injection]) -> tuple[Crossing, ...]:
-    strengths = [item.truth.snr_db for item in injections]
+def _crossings(injections: Sequence[Injection], request: Request) -> tuple[Crossing, ...]:
+    strengths, found = [item.truth.snr_db for item in injections], _found(injections)
     return tuple(
-        strength_at(share, strength_db=strengths, hits=_found(injections)) for share in SHARES
+        strength_at(share, strength_db=strengths, hits=found, range_db=request.snr_range_db)
+        for share in SHARES
     )
 
 
@@ -235,6 +236,7 @@ def _bins(bins: Iterable[Share]) -> list[dict[str, Any]]:
 def _crossing(item: Crossing) -> dict[str, Any]:
     return {
         "share": item.share,
+        "reached": item.reached,
         "strength_db": plain(item.strength_db, decimals=2),
         "interval_db": [
             plain(item.interval_db.low, decimals=2),

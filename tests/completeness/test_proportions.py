@@ -57,7 +57,12 @@ def test_nothing_tried_says_nothing() -> None:
     assert (binomial_interval(0, 0).low, binomial_interval(0, 0).high) == (0.0, 1.0)
     (empty,) = binned([], [], edges=[0.0, 1.0])
     assert math.isnan(empty.share)
-    assert math.isnan(strength_at(0.5, strength_db=[], hits=[]).strength_db)
+    for empty_or_one in ([], [3.0]):
+        found = strength_at(
+            0.5, strength_db=empty_or_one, hits=[True] * len(empty_or_one), range_db=(-3.0, 12.0)
+        )
+        assert math.isnan(found.strength_db)
+        assert found.reached is None
 
 
 def test_bins_hold_everything_once() -> None:
@@ -97,10 +102,27 @@ def test_a_share_that_is_not_reached_is_not_invented() -> None:
     generator = np.random.default_rng(6)
     strength = generator.uniform(-3.0, 12.0, 400)
     hits = found_of(strength, middle_db=1.0, top=0.8, generator=generator)
-    assert math.isnan(strength_at(0.9, strength_db=strength, hits=hits).strength_db)
-    assert strength_at(0.5, strength_db=strength, hits=hits).strength_db == pytest.approx(
-        1.0 + math.log(0.5 / 0.3), abs=0.6
-    )
-    for all_or_none in (True, False):
+    nowhere = strength_at(0.9, strength_db=strength, hits=hits)
+    assert math.isnan(nowhere.strength_db)
+    assert nowhere.reached == "above"
+    half = strength_at(0.5, strength_db=strength, hits=hits)
+    assert half.strength_db == pytest.approx(1.0 + math.log(0.5 / 0.3), abs=0.6)
+    assert half.reached == "within"
+    for all_or_none, where in ((True, "below"), (False, "above")):
         hits = np.full(strength.size, all_or_none)
-        assert math.isnan(strength_at(0.5, strength_db=strength, hits=hits).strength_db)
+        found = strength_at(0.5, strength_db=strength, hits=hits)
+        assert math.isnan(found.strength_db)
+        assert found.reached == where
+
+
+def test_all_found_of_a_few_lies_below_what_was_tried() -> None:
+    """Recovery: 24 of 24 found from 6 to 15 dB. Half is found below that: it would have a chance
+    of 6e-8 were half found there; nine tenths had one of 0.08, which tells nothing."""
+    strength = np.linspace(6.0, 15.0, 24)
+    found = {
+        share: strength_at(share, strength_db=strength, hits=np.full(24, True))
+        for share in (0.5, 0.9)
+    }
+    assert found[0.5].reached == "below"
+    assert math.isnan(found[0.5].strength_db)
+    assert found[0.9].reached is None

@@ -21,10 +21,10 @@ def curves() -> ShareCurves:
         thin=(Share(0.0, 1.0, 40, 10), Share(1.0, 2.0, 0, 0), Share(2.0, 3.0, 40, 40)),
         diffuse=(Share(0.0, 3.0, 10, 5),),
         thin_crossings=(
-            Crossing(0.5, 1.25, Interval(0.75, 1.5)),
-            Crossing(0.9, 2.0, Interval(1.5, NAN)),
+            Crossing(0.5, 1.25, Interval(0.75, 1.5), "within"),
+            Crossing(0.9, 2.0, Interval(1.5, NAN), "within"),
         ),
-        diffuse_crossings=(Crossing(0.5, NAN, Interval(NAN, NAN)),),
+        diffuse_crossings=(Crossing(0.5, NAN, Interval(NAN, NAN), "above"),),
         by_l=(Share(2.0, 3.0, 50, 25), Share(3.0, 4.0, 40, 30)),
         by_hour=(Share(2.0, 3.0, 90, 55),),
     )
@@ -85,6 +85,17 @@ def bins(*edges: float, injected: int = 1500) -> list[dict]:
     ]
 
 
+def reached(
+    where: str | None, *, share: float, at_db: float | None = None, interval_db: list | None = None
+) -> dict:
+    return {
+        "share": share,
+        "reached": where,
+        "strength_db": at_db,
+        "interval_db": interval_db or [None, None],
+    }
+
+
 def rate(count: int, live_s: float) -> dict:
     per_hour = 3600.0 * count / live_s if live_s else None
     ends = [1234.5, 0.25] if live_s else [None, None]
@@ -96,10 +107,9 @@ def rate(count: int, live_s: float) -> dict:
     }
 
 
-@pytest.mark.parametrize("dated", [True, False])
-def test_table_fits_the_terminal(dated: bool) -> None:
+def wide_document(*, dated: bool) -> dict:
     pair = {"one_sigma": part(800, 1200), "1.96_sigma": part(1100, 1200)}
-    document = {
+    return {
         "injected": 100_000,
         "recordings": [{}] * 1000,
         "request": {"snr_range_db": [-19.5, 39.5]},
@@ -112,10 +122,10 @@ def test_table_fits_the_terminal(dated: bool) -> None:
         "by_hour": bins(2, 3) if dated else [],
         "strength_found": {
             "thin": [
-                {"share": 0.5, "strength_db": 1.25, "interval_db": [None, 2.0]},
-                {"share": 0.9, "strength_db": 11.25, "interval_db": [10.0, None]},
+                reached("within", share=0.5, at_db=1.25, interval_db=[None, 2.0]),
+                reached("within", share=0.9, at_db=11.25, interval_db=[10.0, None]),
             ],
-            "diffuse": [{"share": 0.5, "strength_db": None, "interval_db": [None, None]}] * 2,
+            "diffuse": [reached("below", share=0.5), reached("above", share=0.9)],
         },
         "timing": {"median_s": 0.0012, "percentile_90_s": 0.0299},
         "snr_excess_db": -0.5,
@@ -125,10 +135,23 @@ def test_table_fits_the_terminal(dated: bool) -> None:
         "determined": part(1000, 1000),
         "coverage": {"l_value": pair, "equatorial_density_cm3": pair},
     }
-    text = completeness_text(document)
+
+
+@pytest.mark.parametrize("dated", [True, False])
+def test_table_fits_the_terminal(dated: bool) -> None:
+    text = completeness_text(wide_document(dated=dated))
     assert max(map(len, text.splitlines())) <= 80
     assert "50 % found at 1.2 dB (under -19.5 to 2.0)\n" in text
     assert "90 % found at 11.2 dB (10.0 to over 39.5)\n" in text
     assert "10.00 h of 1000 recordings" in text
     assert "e+" not in text
     assert ("02-03" in text) == dated
+
+
+def test_a_share_outside_the_strengths_says_on_which_side() -> None:
+    document = wide_document(dated=False)
+    text = completeness_text(document)
+    assert "50 % found below -19.5 dB already; inject weaker (--snr-range)\n" in text
+    assert "90 % not reached up to 39.5 dB\n" in text
+    document["strength_found"]["diffuse"] = [reached(None, share=0.5)]
+    assert "50 %: too few injected to tell\n" in completeness_text(document)

@@ -87,18 +87,24 @@ def _percent(item: dict[str, Any]) -> str:
 
 def _reached(document: dict[str, Any], kind: str) -> list[str]:
     """Where the shares of one kind are reached."""
-    low_db, high_db = document["request"]["snr_range_db"]
-    parts = []
-    for item in document["strength_found"][kind]:
-        share, at = f"{100 * item['share']:.0f} %", item["strength_db"]
-        if at is None:
-            parts.append(f"{share} not reached within {low_db:g} to {high_db:g} dB")
-            continue
-        low, high = item["interval_db"]
-        begin = f"under {low_db:g}" if low is None else f"{low:.1f}"
-        end = f"over {high_db:g}" if high is None else f"{high:.1f}"
-        parts.append(f"{share} found at {at:.1f} dB ({begin} to {end})")
+    range_db = document["request"]["snr_range_db"]
+    parts = [_where(item, range_db=range_db) for item in document["strength_found"][kind]]
     return [f"{'' if number else kind:<16}{text}" for number, text in enumerate(parts)]
+
+
+def _where(item: dict[str, Any], *, range_db: Sequence[float]) -> str:
+    """Where one share is reached, or on which side of the strengths injected."""
+    (low_db, high_db), share = range_db, f"{100 * item['share']:.0f} %"
+    if item["reached"] is None:
+        return f"{share}: too few injected to tell"
+    if item["reached"] == "below":
+        return f"{share} found below {low_db:g} dB already; inject weaker (--snr-range)"
+    if item["reached"] == "above":
+        return f"{share} not reached up to {high_db:g} dB"
+    low, high = item["interval_db"]
+    begin = f"under {low_db:g}" if low is None else f"{low:.1f}"
+    end = f"over {high_db:g}" if high is None else f"{high:.1f}"
+    return f"{share} found at {item['strength_db']:.1f} dB ({begin} to {end})"
 
 
 def _quality(document: dict[str, Any]) -> list[str]:
