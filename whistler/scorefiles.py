@@ -34,11 +34,14 @@ _MEASURED = (
     "hops",
     "l_value",
     "l_value_sd",
+    "l_value_low",
+    "l_value_high",
     "equatorial_density_cm3",
     "equatorial_density_sd_cm3",
     "snr_db",
     "significance",
     "uncertainty_status",
+    "flags",
 )
 CSV_COLUMNS = (
     "recording",

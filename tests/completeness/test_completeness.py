@@ -96,11 +96,25 @@ def test_strong_ones_are_found_weak_ones_are_not(
         assert float(row["found_l_value"] or "nan") == pytest.approx(
             float(row["l_value"]), rel=0.2, nan_ok=True
         )
+    check_found(strong, weak)
     assert all(row["time"].startswith("2025-03-14T02:30:") for row in rows)
     again = completeness(capsys, folder, "--out", tmp_path / "b", "--json")
     assert again.out == outcome.out
     assert digests(tmp_path / "a") == digests(tmp_path / "b")
     assert json.loads((tmp_path / "a" / "completeness.json").read_text()) == document
+
+
+def check_found(strong: list[dict[str, str]], weak: list[dict[str, str]]) -> None:
+    """Interval and flags of the rows found: those of the catalogue, empty where none was found."""
+    for row in strong:
+        assert ("diffuse" in row["found_flags"].split()) == (row["kind"] == "diffuse")
+    determined = [row for row in strong if row["found_uncertainty_status"] == "ok"]
+    assert determined
+    for row in determined:
+        low, high = float(row["found_l_value_low"]), float(row["found_l_value_high"])
+        assert low < float(row["found_l_value"]) < high
+    for row in weak:
+        assert row["found_l_value_low"] == row["found_l_value_high"] == row["found_flags"] == ""
 
 
 def check_document(document: dict) -> None:
@@ -128,7 +142,11 @@ def check_document(document: dict) -> None:
         assert sum(item["injected"] for item in document[name]) == WHISTLERS
         assert sum(item["found"] for item in document[name]) == document["found"]
     assert [item["low"] for item in document["by_hour"]] == [2.0]
-    assert [item["share"] for item in document["strength_found"]["thin"]] == [0.5, 0.9]
+    found_at = document["strength_found"]
+    assert [item["share"] for item in found_at["thin"]] == [0.5, 0.9]
+    sides = {item["reached"] for kind in ("thin", "diffuse") for item in found_at[kind]}
+    assert sides <= {"below", "within", "above", None}
+    assert found_at["thin"][0]["reached"] == "within"
     for part in document["coverage"].values():
         assert set(part) == {"one_sigma", "1.96_sigma"}
 
