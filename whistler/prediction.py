@@ -24,6 +24,7 @@ if TYPE_CHECKING:
 
 FREQUENCY_STEP_HZ = 500.0
 HIGHEST_DEFAULT_HZ = 10_000.0
+CURVE_POINTS = 200  # of the figure, however few frequencies the table has
 USABLE_SHARE = 0.95  # of the smallest gyrofrequency on the path, for the default frequencies
 FIGURE_ENDINGS = (".png", ".pdf", ".svg")
 CM3_PER_M3 = 1e6
@@ -43,6 +44,8 @@ class Prediction:
         Field-line crossings that `time_s` covers.
     frequency_hz, time_s : ndarray, shape (n,)
         Frequencies, and arrival after the lightning.
+    curve_hz, curve_s : ndarray, shape (200,)
+        The same, closely over the range of those frequencies, for the figure.
     nose_frequency_hz, nose_time_s : float
         Nose of one hop; NaN when it lies beyond the model's validity.
     dispersion_s_sqrt_hz : float
@@ -58,6 +61,8 @@ class Prediction:
     hops: int
     frequency_hz: NDArray[np.float64]
     time_s: NDArray[np.float64]
+    curve_hz: NDArray[np.float64]
+    curve_s: NDArray[np.float64]
     nose_frequency_hz: float
     nose_time_s: float
     dispersion_s_sqrt_hz: float
@@ -127,6 +132,8 @@ def predict_path(
     one_hop_s = travel_time(
         frequencies, l_value=l_value, equatorial_density_m3=density_m3, model=model
     )
+    curve_hz = np.geomspace(frequencies.min(), frequencies.max(), CURVE_POINTS)
+    curve_s = travel_time(curve_hz, l_value=l_value, equatorial_density_m3=density_m3, model=model)
     least = nose(l_value, equatorial_density_m3=density_m3, model=model)
     return Prediction(
         l_value=l_value,
@@ -134,6 +141,8 @@ def predict_path(
         hops=hops,
         frequency_hz=frequencies,
         time_s=hops * one_hop_s,
+        curve_hz=curve_hz,
+        curve_s=hops * curve_s,
         nose_frequency_hz=least.frequency_hz,
         nose_time_s=least.time_s,
         dispersion_s_sqrt_hz=zero_frequency_dispersion(
@@ -171,7 +180,7 @@ def prediction_text(prediction: Prediction) -> str:
 def plot_prediction(prediction: Prediction, ax: Axes) -> Axes:
     """Return the axes after drawing arrival time against frequency, the nose marked."""
     label = f"L {prediction.l_value:g}, {prediction.density_cm3:g} cm$^{{-3}}$"
-    ax.plot(prediction.time_s, prediction.frequency_hz / 1e3, color="#0072B2", label=label)
+    ax.plot(prediction.curve_s, prediction.curve_hz / 1e3, color="#0072B2", label=label)
     if np.isfinite(prediction.nose_frequency_hz):
         nose_s = prediction.hops * prediction.nose_time_s
         ax.plot(nose_s, prediction.nose_frequency_hz / 1e3, "D", color="#D55E00", label="nose")

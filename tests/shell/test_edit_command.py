@@ -278,7 +278,7 @@ def test_what_a_person_reads_fits_eighty_columns(whistler: Whistler, results: Pa
     assert lines[0] == NAME
     assert "edits   drop 5000 to 6000 Hz, trace 3" in lines
     count = sum(len(row["trace"]["time_s"]) for row in stored(results.parent / "edited", 1))
-    listed = lines[lines.index("trace       Hz      time s     ± ms   left ms") + 1 :]
+    listed = lines[lines.index("trace       Hz      time s     ± ms  resid ms") + 1 :]
     assert len(listed[: listed.index("")]) == count
     assert lines[-1] == "saved in edited: catalogue.csv"
 

@@ -9,9 +9,11 @@ import numpy as np
 import pytest
 from shell_helpers import Whistler, table
 
+from fieldlines import CentredDipole
+from fieldlines.line import FieldLineModel
 from whistler.errors import UsageError
 from whistler.picks import DEFAULT_SD_S, read_picks
-from whistler.prediction import Prediction, plot_prediction
+from whistler.prediction import Prediction, plot_prediction, predict_path
 
 PATH = ("predict", "--l", "3", "--density", "900")
 
@@ -83,6 +85,8 @@ def test_the_figure_shows_what_was_predicted() -> None:
         hops=2,
         frequency_hz=np.array([1e3, 4e3]),
         time_s=np.array([5.0, 2.5]),
+        curve_hz=np.array([1e3, 2e3, 4e3]),
+        curve_s=np.array([5.0, 3.5, 2.5]),
         nose_frequency_hz=11e3,
         nose_time_s=1.0,
         dispersion_s_sqrt_hz=70.0,
@@ -91,9 +95,22 @@ def test_the_figure_shows_what_was_predicted() -> None:
     )
     ax = plot_prediction(prediction, Figure().add_subplot())
     curve, nose = ax.get_lines()
-    assert np.array_equal(curve.get_xydata(), [[5.0, 1.0], [2.5, 4.0]])
+    assert np.array_equal(curve.get_xydata(), [[5.0, 1.0], [3.5, 2.0], [2.5, 4.0]])
     assert np.array_equal(nose.get_xydata(), [[2.0, 11.0]])
     assert (ax.get_xlabel(), ax.get_ylabel()) == ("time after the lightning (s)", "frequency (kHz)")
+
+
+def test_the_figure_is_smooth_between_few_frequencies() -> None:
+    """Identity: the curve passes the table's ends; its two hundred points lie within 5 % of one
+    another in frequency. Tolerance: rounding, and 200 steps over a factor of eight."""
+    model = FieldLineModel(CentredDipole.from_date(2025.0))
+    path = predict_path(
+        3.0, density_cm3=900.0, model=model, hops=3, frequencies_hz=[8000.0, 1000.0]
+    )
+    assert path.frequency_hz.size == 2
+    assert path.curve_hz.size == 200
+    assert np.diff(np.log(path.curve_hz)).max() < 0.05
+    assert path.curve_s[[-1, 0]] == pytest.approx(path.time_s, rel=1e-9)
 
 
 def picks_from(path: Path, text: str) -> Path:

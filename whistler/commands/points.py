@@ -9,8 +9,8 @@ from whistler.pickfit import left_over_s
 from whistler.rows import WhistlerRow
 from whistler.settings import Settings
 
-HEAD = "trace       Hz      time s     ± ms   left ms"
-NOTE = "left: point minus fitted model"
+HEAD = "trace       Hz      time s     ± ms  resid ms"
+NOTE = "resid: point minus fitted model"
 
 
 def points_table(rows: Sequence[WhistlerRow], *, settings: Settings) -> str:
