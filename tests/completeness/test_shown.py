@@ -51,6 +51,22 @@ def test_shares_stand_at_their_bins(curves: ShareCurves) -> None:
     assert ends[1] == pytest.approx([100.0 * 0.025 ** (1.0 / 40.0), 100.0])
 
 
+def test_the_legend_lies_off_the_data_and_markers_are_whole(curves: ShareCurves) -> None:
+    figure = plot_shares(curves, title="made")
+    figure.canvas.draw()
+    first = figure.axes[0]
+    legend = first.get_legend().get_window_extent()
+    assert not legend.overlaps(first.get_window_extent())
+    assert figure.bbox.ymax > legend.ymax
+    (below,) = (text for text in figure.texts if text.get_text().startswith("bars"))
+    assert not legend.overlaps(below.get_window_extent())
+    marker_px = first.containers[0].lines[0].get_markersize() * figure.dpi / 72.0
+    for ax in figure.axes:
+        ends_px = ax.transData.transform([(0.0, 0.0), (0.0, 100.0)])[:, 1]
+        frame = ax.get_window_extent()
+        assert frame.ymin + marker_px / 2 < ends_px[0] < ends_px[1] < frame.ymax - marker_px / 2
+
+
 def test_no_panel_of_hours_without_a_clock(curves: ShareCurves) -> None:
     undated = ShareCurves(**{**vars(curves), "by_hour": ()})
     assert len(plot_shares(undated, title="made").axes) == 2

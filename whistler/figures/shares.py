@@ -112,7 +112,18 @@ def plot_shares(curves: ShareCurves, *, title: str) -> Figure:
     strength.set_xlim(curves.thin[0].low, curves.thin[-1].high)
     strength.set_xlabel("strength, dB (power over noise in a 21.3 ms cell)", fontsize=TEXT_PT)
     strength.set_ylabel("share found, %", fontsize=TEXT_PT)
-    strength.legend(loc="upper left", fontsize=TEXT_PT, frameon=False)
+    strength.legend(
+        loc="lower right",
+        bbox_to_anchor=(1.0, 1.0),  # above the panel: bars may stand anywhere in it
+        ncols=2,
+        borderaxespad=0.3,
+        borderpad=0.0,
+        columnspacing=0.8,
+        handlelength=1.2,
+        handletextpad=0.4,
+        fontsize=TEXT_PT,
+        frameon=False,
+    )
     draw_shares(curves.by_l, others[0], number=4)
     others[0].set_xlim(curves.by_l[0].low, curves.by_l[-1].high)
     others[0].set_xlabel("L", fontsize=TEXT_PT)
@@ -141,7 +152,7 @@ def _panels(figure: Figure, *, with_hours: bool) -> list[Axes]:
         boxes.append(Box(left_in, TOP_IN, other_in, PANEL_IN))
     panels = [place(figure, box) for box in boxes]
     for ax in panels:
-        ax.set_ylim(-3.0, 103.0)
+        ax.set_ylim(-5.0, 105.0)
         ax.set_yticks(np.arange(0, 101, 10))
         ax.grid(axis="y", color=GRID, linewidth=0.6)
         ax.set_axisbelow(True)
