@@ -24,7 +24,8 @@ NOISE_CUT = 4.0  # times the mean noise; what is below is not pattern
 ROUNDS = 4
 LEAST_SD_S = 8e-5  # a stroke's own pulse is no shorter
 CENTRE_SD = 0.57  # cells of a pattern are not all alike; measured on synthetic ducts
-LAG_SD = 0.187  # of strong sub-bands, in units of one over the band width; from synthetic ducts
+LAG_SD = 0.18  # of strong sub-bands, in units of one over the band width; from synthetic ducts
+THICK_SD = 0.8  # how much less alike the sub-bands of a thick trace are than they look
 NOISE_LAG_SD = 1.3  # in the same units, at a peak as strong as the noise; falls with its root
 
 
@@ -40,6 +41,8 @@ class Alignment:
         Of each sub-band with the mean of the others, 0 to 1.
     strength : ndarray, shape (bands,)
         Peak power of each sub-band over its noise.
+    thickness_s : float
+        Of the trace.
     centre_share_sd : float
         One-sigma of the pattern's centre as a share of the travel time: common to all sub-bands.
     """
@@ -47,14 +50,17 @@ class Alignment:
     lag_s: FloatArray
     correlation: FloatArray
     strength: FloatArray
+    thickness_s: float
     centre_share_sd: float
 
     def lag_sd_s(self, band_width_hz: float) -> FloatArray:
         """Return the one-sigma of each lag: larger for weak bands, and those unlike the others."""
         unlike = np.sqrt(np.maximum(1.0 - self.correlation**2, 0.01))
-        by_shape = LAG_SD * unlike / np.maximum(self.correlation, 0.1)
+        ragged = np.sqrt(1.0 + THICK_SD * self.thickness_s * band_width_hz)
+        by_shape = LAG_SD * ragged * unlike / np.maximum(self.correlation, 0.1)
         by_noise = NOISE_LAG_SD / np.sqrt(self.strength)
-        return np.sqrt((by_shape**2 + by_noise**2) / band_width_hz**2 + LEAST_SD_S**2)
+        variance = (by_shape**2 + by_noise**2) / band_width_hz**2 + LEAST_SD_S**2
+        return np.asarray(np.sqrt(variance))
 
 
 def align(
@@ -94,6 +100,7 @@ def align(
         lag_s=(shift_s + centre_s) * travel_s / reference_s,
         correlation=correlation,
         strength=view.power.max(axis=1),
+        thickness_s=thickness_s,
         centre_share_sd=CENTRE_SD * width_s / reference_s / np.sqrt(cells),
     )
 
@@ -151,5 +158,5 @@ def _shape(
     centre_s = float((pattern * grid_s).sum() / total)
     variance = float((pattern * (grid_s - centre_s) ** 2).sum() / total)
     own_s = 0.25 / band_width_hz
-    cells = total**2 / float((pattern**2).sum()) * GRID_S * band_width_hz
+    cells = total**2 / max(float((pattern**2).sum()), 1e-24) * GRID_S * band_width_hz
     return centre_s, float(np.sqrt(max(variance - own_s**2, 0.0))), max(cells, 1.0)
