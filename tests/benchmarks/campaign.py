@@ -2,7 +2,7 @@
 
 Run by hand, with nothing else running on the machine:
 
-    python -m tests.benchmarks.campaign [--whistlers 300] [--minutes 40] [--json]
+    python -m tests.benchmarks.campaign [--whistlers 300] [--minutes 40] [--first-seed N] [--json]
 
 Whistlers and decoys are drawn from fixed seeds, and go through rendering, FLAC, opening and
 measuring, as in the small campaign of the ordinary test run, whose matching and scoring
@@ -173,13 +173,16 @@ def main() -> int:
     parser.add_argument(
         "--astray", type=int, default=150, help="true traces of the second campaign"
     )
+    parser.add_argument(
+        "--first-seed", type=int, default=FIRST_WHISTLER_SEED, help="of the whistlers"
+    )
     parser.add_argument("--json", action="store_true", help="print one JSON document")
     options = parser.parse_args()
 
     progress("timing")
     parts = {"Speed": timing()}
     progress("whistlers")
-    seeds = range(FIRST_WHISTLER_SEED, FIRST_WHISTLER_SEED + 1000)
+    seeds = range(options.first_seed, options.first_seed + 1000)
     summary = Summary.of(
         run_campaign(seeds, campaign=Campaign(offset_sd_m=0.0), least=options.whistlers)
     )
